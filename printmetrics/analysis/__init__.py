@@ -1,0 +1,1 @@
+"""Pixels in, pixels out: no units, no files, no state."""

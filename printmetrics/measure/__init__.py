@@ -1,0 +1,1 @@
+"""Kinds of feature: one module or folder each, and what they have in common."""

@@ -1,0 +1,41 @@
+"""The table of kinds: what the recipe may name, and who measures it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+from printmetrics.measure import lines
+
+if TYPE_CHECKING:
+    from printmetrics.measure.options import FeatureOptions
+    from printmetrics.measure.readings import Measured
+    from printmetrics.measure.sight import Sight
+
+
+@dataclass(frozen=True, slots=True)
+class Kind:
+    """One kind of feature.
+
+    Parameters
+    ----------
+    options : type
+        The recipe's model for it.
+    measure : callable
+        Takes what is seen and the options, gives what was measured.
+    expected_items : callable
+        Names the items that the options promise, for rows that must not be missing.
+    count : str
+        The quantity that counts its items.
+    """
+
+    options: type[FeatureOptions]
+    measure: Callable[[Sight, FeatureOptions], Measured]
+    expected_items: Callable[[FeatureOptions], dict[str, tuple[str, ...]]]
+    count: str
+
+
+KINDS: dict[str, Kind] = {
+    "lines": Kind(lines.LinesOptions, lines.measure_lines, lines.expected_items, "line_count"),
+}

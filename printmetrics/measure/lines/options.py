@@ -1,0 +1,45 @@
+"""What a recipe says about a set of lines."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import Field, FiniteFloat, model_validator
+
+from printmetrics.measure.options import FeatureOptions, Positive
+
+MAX_TILT_DEG = 30.0
+
+
+class LinesOptions(FeatureOptions):
+    """A feature of kind ``lines``."""
+
+    kind: Literal["lines"]
+    ink: Literal["bright", "dark"] = Field(description="Ink brighter or darker than what surrounds it.")
+    direction: Literal["auto", "horizontal", "vertical"] | Annotated[FiniteFloat, Field(ge=-180, le=180)] = Field(
+        "auto", description="Which way the lines run: found by itself, along an axis, or degrees from +x towards +y."
+    )
+    centres: tuple[FiniteFloat, ...] | None = Field(
+        None, min_length=1,
+        description="Where the lines' centres are, in um across them, at the middle of the region; "
+        "keeps L1, L2, L3 the same line.",
+    )
+    count: Annotated[int, Field(ge=1)] | None = Field(None, description="Expected number of lines.")
+    edge_level: Annotated[float, Field(ge=0.1, le=0.9)] = Field(
+        0.5, description="Where between dark (0) and bright (1) the edge is taken."
+    )
+    neck_length: Positive | None = Field(
+        None, description="Local width is averaged over this length for width_min and width_max; "
+        "default: 4 blur sigmas."
+    )
+
+    @model_validator(mode="after")
+    def _consistent(self) -> LinesOptions:
+        if self.centres is not None:
+            if list(self.centres) != sorted(set(self.centres)):
+                msg = "centres must rise and not repeat"
+                raise ValueError(msg)
+            if self.count is not None and self.count != len(self.centres):
+                msg = f"count is {self.count} but {len(self.centres)} centres are given"
+                raise ValueError(msg)
+        return self
