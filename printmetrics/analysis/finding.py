@@ -1,0 +1,318 @@
+"""Find the lines of a picture: which way they run, how many there are, and roughly where their edges are."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import cv2
+import numpy as np
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+MAX_TILT_DEG = 30.0
+_BANDS, _BAND_ROWS = 8, 12  # the direction is taken from this much of a large picture
+_BLOCKS = 64  # so many blocks along the lines, where there are rows enough
+_BLOCK_ROWS = 2, 32
+_ROWS_USED = 8  # of each block, enough to lift a line out of the noise
+_SMOOTH_PX = 1.0
+_NOISE_SIGMAS = 6.0  # a step counts when it stands out of the noise by this much
+_RELATIVE_STEP = 0.12  # and is at least this part of the picture's strong steps
+_COVERED = 0.4  # a line shows its edges over at least this part of its way through the region
+
+
+@dataclass(frozen=True, slots=True)
+class Direction:
+    """Which way the lines run.
+
+    Parameters
+    ----------
+    vertical : bool
+        True where they run along the columns of the picture.
+    slope : float
+        Change of the across coordinate per unit of the along coordinate.
+    rival : float
+        Strength of edges along the other axis over that along this one.
+    """
+
+    vertical: bool
+    slope: float
+    rival: float
+
+
+@dataclass(frozen=True, slots=True)
+class CoarseLine:
+    """One line as found: rough edges in blocks of rows.
+
+    Parameters
+    ----------
+    rows : ndarray of float, shape (B,)
+        Middle row of each block in which both edges were seen. [px]
+    left, right : ndarray of float, shape (B,)
+        Columns of the edges. [px]
+    """
+
+    rows: NDArray[np.float64]
+    left: NDArray[np.float64]
+    right: NDArray[np.float64]
+
+
+def find_direction(image: NDArray[Any], *, vertical: bool | None = None) -> Direction:
+    """Return the direction in which most edges run, within 30 degrees of an axis.
+
+    Parameters
+    ----------
+    image : ndarray, shape (M, N)
+        Picture. [counts]
+    vertical : bool, optional
+        Look only at lines along the columns (True) or the rows (False).
+
+    Returns
+    -------
+    Direction
+        Axis, slope and the other axis' strength.
+
+    Notes
+    -----
+    Histogram of gradient angles, weighted with the squared gradient above its noise, in bands of rows and of columns.
+    """
+    votes = np.zeros(180)
+    for axis in (0, 1):
+        size = image.shape[axis]
+        band = min(_BAND_ROWS, size)
+        for start in np.unique(np.linspace(0, size - band, _BANDS).astype(int)):
+            part = image[start : start + band] if axis == 0 else image[:, start : start + band]
+            votes += _angle_votes(np.ascontiguousarray(part, dtype=np.float32))
+    votes = sum(np.roll(votes, k) for k in range(-2, 3))  # type: ignore[assignment]
+    reach = round(MAX_TILT_DEG) + 2
+    near = np.arange(-reach, reach + 1)
+    strength = {True: votes[near % 180], False: votes[(near + 90) % 180]}
+    best = {key: float(value.max()) for key, value in strength.items()}
+    upright = best[True] >= best[False] if vertical is None else vertical
+    peak = int(np.argmax(strength[upright]))
+    around = np.arange(max(peak - 4, 0), min(peak + 5, len(near)))
+    floor = float(np.median(strength[upright]))
+    weight = np.maximum(strength[upright][around] - floor, 0.0)
+    angle = float(np.sum(weight * near[around]) / max(weight.sum(), 1e-30)) if weight.any() else 0.0
+    # A gradient at `angle` from +x belongs to a line at `angle` from +y: x falls as y grows.
+    slope = -math.tan(math.radians(angle)) if upright else math.tan(math.radians(angle))
+    return Direction(upright, slope, best[not upright] / max(best[upright], 1e-30))
+
+
+def _angle_votes(part: NDArray[np.float32]) -> NDArray[np.float64]:
+    part = cv2.GaussianBlur(part, (0, 0), 1.2)
+    gx = cv2.Sobel(part, cv2.CV_32F, 1, 0)
+    gy = cv2.Sobel(part, cv2.CV_32F, 0, 1)
+    power = gx * gx + gy * gy
+    noise = float(np.median(power))
+    strong = power > 6 * noise
+    angle = np.degrees(np.arctan2(gy[strong], gx[strong])) % 180
+    return np.bincount(np.rint(angle).astype(int) % 180, weights=power[strong], minlength=180)
+
+
+def block_profiles(image: NDArray[Any], slope: float, rows: int) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
+    """Average blocks of rows along the lines.
+
+    Parameters
+    ----------
+    image : ndarray, shape (M, N)
+        Picture with lines along the columns. [counts]
+    slope : float
+        Change of column per row along a line.
+    rows : int
+        Rows a block; a shorter rest at the end is left out.
+
+    Returns
+    -------
+    profiles : ndarray of float32, shape (M // rows, N)
+        Means of up to 8 rows, at the columns where the lines cross the block's middle. [counts]
+    centre : ndarray of float, shape (M // rows,)
+        Middle row of each block. [px]
+    """
+    count, width = image.shape[0] // rows, image.shape[1]
+    total = np.zeros((count, width), np.float32)
+    seen = np.zeros(width, np.float32)
+    for j in range(0, rows, math.ceil(rows / _ROWS_USED)):
+        part = image[j : count * rows : rows]
+        shift = round((j - (rows - 1) / 2) * slope)
+        low, high = max(0, -shift), min(width, width - shift)
+        if high <= low:
+            continue
+        target = total[:, low:high]
+        target += part[:, low + shift : high + shift]
+        seen[low:high] += 1
+    return total / np.maximum(seen, 1), np.arange(count) * rows + (rows - 1) / 2
+
+
+def find_lines(image: NDArray[Any], slope: float, *, bright: bool) -> list[CoarseLine]:
+    """Find the lines that run along the columns.
+
+    Parameters
+    ----------
+    image : ndarray, shape (M, N)
+        Picture. [counts]
+    slope : float
+        Change of column per row along the lines.
+    bright : bool
+        Ink brighter than what surrounds it.
+
+    Returns
+    -------
+    list of CoarseLine
+        From left to right.
+
+    Notes
+    -----
+    Blocks of rows are averaged along the lines; a rising and a falling step, each 6 times above the noise, make a
+    piece; pieces that follow each other make a line, over gaps too, when they lie on one course. A thing that
+    doesn't run through the region for at least 40 % of its way is no line: letters, drops and dust fall out.
+    """
+    rows = min(max(image.shape[0] // _BLOCKS, _BLOCK_ROWS[0]), _BLOCK_ROWS[1])
+    profiles, centre = block_profiles(image, slope, rows)
+    if not len(centre):
+        return []
+    pieces = _pieces(profiles, bright=bright)
+    chains = _chains(pieces, centre, slope)
+    lines = _join(chains, slope)
+    kept = [line for line in lines if _covered(line, image.shape[1], centre) >= _COVERED]
+    middle = image.shape[0] / 2
+    return sorted(kept, key=lambda c: float(np.median((c.left + c.right) / 2 - slope * (c.rows - middle))))
+
+
+def _pieces(profiles: NDArray[np.float32], *, bright: bool) -> list[NDArray[np.float64]]:
+    """Return for each block the left and right edges of what looks like ink, shape (n, 2)."""
+    smooth = cv2.GaussianBlur(profiles, (0, 0), sigmaX=_SMOOTH_PX, sigmaY=1e-3)
+    step = np.zeros_like(smooth)
+    step[:, 1:-1] = smooth[:, 2:] - smooth[:, :-2]
+    if not bright:
+        step = -step
+    # The noise of the difference of two means, from the differences between neighbouring blocks' pixels.
+    rough = np.diff(profiles, axis=1)
+    noise = 1.4826 * float(np.median(np.abs(rough - np.median(rough)))) / math.sqrt(2) * _STEP_NOISE
+    size = np.abs(step)
+    strong = float(np.percentile(size.max(axis=1), 50))
+    least = max(_NOISE_SIGMAS * noise, _RELATIVE_STEP * strong, 1e-6 * float(np.abs(profiles).max()) + 1e-12)
+    peak = np.zeros(step.shape, bool)
+    middle = size[:, 1:-1]
+    peak[:, 1:-1] = (middle > size[:, :-2]) & (middle >= size[:, 2:]) & (middle > least)
+    found = []
+    for b in range(len(profiles)):
+        at = np.nonzero(peak[b])[0]
+        sign = np.sign(step[b, at])
+        amount = size[b, at]
+        before, here, after = size[b, at - 1], size[b, at], size[b, at + 1]
+        place = at + 0.5 * (before - after) / np.minimum(before - 2 * here + after, -1e-12)
+        # Of several steps of one sign in a row the strongest stands for them.
+        keep = np.ones(len(at), bool)
+        first = 0
+        for k in range(1, len(at) + 1):
+            if k == len(at) or sign[k] != sign[first]:
+                keep[first:k] = False
+                keep[first + int(np.argmax(amount[first:k]))] = True
+                first = k
+        place, sign = place[keep], sign[keep]
+        left = np.nonzero((sign[:-1] > 0) & (sign[1:] < 0))[0]
+        found.append(np.column_stack([place[left], place[left + 1]]))
+    return found
+
+
+_STEP_NOISE = math.sqrt(2) * 0.53  # sd of smooth(x+1) - smooth(x-1) over that of a pixel, for a sigma of 1 px
+
+
+class _Chain:
+    """Pieces of successive blocks that belong together, with the edges expected next."""
+
+    def __init__(self, row: float, edges: NDArray[np.float64]) -> None:
+        self.rows = [row]
+        self.edges = [edges]
+        self.tip = edges
+
+    def add(self, row: float, edges: NDArray[np.float64], expected: NDArray[np.float64]) -> None:
+        self.rows.append(row)
+        self.edges.append(edges)
+        self.tip = 0.5 * (expected + edges)
+
+    def end(self, row: float, slope: float, *, first: bool) -> NDArray[np.float64]:
+        """Edges expected at a row from the nearest few blocks."""
+        near = slice(None, 5) if first else slice(-5, None)
+        rows, edges = np.array(self.rows[near]), np.array(self.edges[near])
+        return np.asarray(np.median(edges + slope * (row - rows)[:, None], axis=0))
+
+
+def _same(expected: NDArray[np.float64], seen: NDArray[np.float64], slack: float) -> NDArray[np.float64]:
+    """Return how far each piece is from where a line is expected; infinite where it can't be that line."""
+    width = expected[1] - expected[0]
+    off = np.abs(seen - expected)
+    worst = np.maximum(off[:, 0], off[:, 1])
+    return np.where(worst <= min(slack + 0.15 * width, 0.5 * width + 1.5), worst, np.inf)
+
+
+def _chains(pieces: list[NDArray[np.float64]], centre: NDArray[np.float64], slope: float) -> list[_Chain]:
+    """Link pieces of successive blocks."""
+    done: list[_Chain] = []
+    live: list[_Chain] = []
+    for row, seen in zip(centre.tolist(), pieces, strict=True):
+        free = np.ones(len(seen), bool)
+        going = []
+        for chain in live:
+            expected = chain.tip + slope * (row - chain.rows[-1])
+            distance = np.where(free, _same(expected, seen, 2.0), np.inf)
+            best = int(distance.argmin()) if len(seen) else -1
+            if best >= 0 and distance[best] < np.inf:
+                free[best] = False
+                chain.add(row, seen[best], expected)
+                going.append(chain)
+            else:
+                done.append(chain)
+        going += [_Chain(row, piece) for piece in seen[free]]
+        live = going
+    return [c for c in done + live if len(c.rows) > 1]
+
+
+def _join(chains: list[_Chain], slope: float) -> list[CoarseLine]:
+    """Join chains that lie on one course, over gaps."""
+    lines: list[_Chain] = []
+    for chain in sorted(chains, key=lambda c: c.rows[0]):
+        best, least = None, np.inf
+        for line in lines:
+            gap = chain.rows[0] - line.rows[-1]
+            if gap <= 0:
+                continue
+            own = _course(line, slope)
+            expected = line.end(chain.rows[0], own, first=False)
+            begin = chain.end(chain.rows[0], slope, first=True)
+            distance = float(_same(expected, begin[None], 2.5 + 0.02 * gap)[0])
+            if distance < least:
+                best, least = line, distance
+        if best is None:
+            lines.append(chain)
+        else:
+            best.rows += chain.rows
+            best.edges += chain.edges
+    return [
+        CoarseLine(np.array(line.rows), np.array([e[0] for e in line.edges]), np.array([e[1] for e in line.edges]))
+        for line in lines
+    ]
+
+
+def _course(line: _Chain, slope: float) -> float:
+    """Slope of a chain's own middle, once it is long enough to have one."""
+    if len(line.rows) < 6:  # noqa: PLR2004  (fewer blocks give no slope better than the picture's)
+        return slope
+    middle = np.array(line.edges).mean(axis=1)
+    return float(np.polyfit(line.rows, middle, 1)[0])
+
+
+def _covered(line: CoarseLine, width: int, centre: NDArray[np.float64]) -> float:
+    """Return the share of its way through the region over which a line was seen."""
+    middle = (line.left + line.right) / 2
+    if len(centre) < 3 or len(line.rows) < 2:  # noqa: PLR2004  (a course needs two points)
+        return 0.0
+    course = np.polyval(np.polyfit(line.rows, middle, 1), centre)
+    half = float(np.median(line.right - line.left)) / 2 + 3
+    way = (course > half) & (course < width - 1 - half)
+    if len(line.rows) < max(3, 0.1 * len(centre)):
+        return 0.0
+    return len(line.rows) / max(int(way.sum()), 1)
