@@ -1,0 +1,1 @@
+"""Scales: where they come from and how they are kept."""

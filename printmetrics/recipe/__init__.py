@@ -1,0 +1,17 @@
+"""The recipe: what to measure, where, with which limits."""
+
+from printmetrics.recipe.context import CONTEXT_COLUMNS, moment
+from printmetrics.recipe.load import load_recipe
+from printmetrics.recipe.model import Correct, Images, Optics, Recipe, ScaleSource, Web
+
+__all__ = [
+    "CONTEXT_COLUMNS",
+    "Correct",
+    "Images",
+    "Optics",
+    "Recipe",
+    "ScaleSource",
+    "Web",
+    "load_recipe",
+    "moment",
+]

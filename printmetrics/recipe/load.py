@@ -1,0 +1,73 @@
+"""Reading a recipe."""
+
+from __future__ import annotations
+
+import json
+import re
+import tomllib
+from pathlib import Path
+
+from pydantic import ValidationError
+
+from printmetrics.errors import RecipeError
+from printmetrics.recipe.model import Recipe
+from printmetrics.recipe.problems import explain, line_numbers
+
+
+def load_recipe(path: str | Path) -> Recipe:
+    """Read a recipe and check it with everything it refers to.
+
+    Parameters
+    ----------
+    path : str or Path
+        The TOML file.
+
+    Returns
+    -------
+    Recipe
+        Checked and frozen.
+
+    Raises
+    ------
+    RecipeError
+        With all that is wrong: line, place, what, and the remedy.
+    """
+    path = Path(path)
+    try:
+        text = path.read_text(encoding="utf-8-sig")
+    except UnicodeDecodeError as error:
+        msg = f"the recipe {path} is not text in UTF-8; save it as UTF-8, or name the right file"
+        raise RecipeError(msg) from error
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or error
+        msg = (
+            f"the recipe {path} cannot be read: {reason}; check the name, or write one with 'printmetrics recipe start'"
+        )
+        raise RecipeError(msg) from error
+    try:
+        raw = tomllib.loads(text)
+    except (tomllib.TOMLDecodeError, RecursionError) as error:
+        raise RecipeError(_syntax(str(error), path.name)) from error
+    try:
+        # By way of JSON: there a list may be a tuple and a whole number a float, and nothing else is bent to fit.
+        return Recipe.model_validate_json(
+            json.dumps(raw, default=str), strict=True, context={"folder": path.absolute().parent, "file": path.name}
+        )
+    except ValidationError as error:
+        msg = explain(error, raw, line_numbers(text), Recipe.model_json_schema(), path.name)
+        raise RecipeError(msg) from error
+    except OSError as error:
+        msg = f"{path.name}: {error.filename} cannot be read: {error.strerror}; check your access rights"
+        raise RecipeError(msg) from error
+
+
+def _syntax(message: str, file: str) -> str:
+    what, _, place = message.partition(" (at ")
+    line = re.search(r"line (\d+), column (\d+)", place)
+    where = f"line {line[1]}, column {line[2]}" if line else place.rstrip(")") or "somewhere"
+    remedy = (
+        "write patterns and Windows paths between single quotes, where \\ stands for itself"
+        if "\\" in what
+        else "correct the spelling of TOML there"
+    )
+    return f"the recipe cannot be read as TOML:\n  {file}, {where}: {what}; {remedy}"
