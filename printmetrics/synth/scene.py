@@ -18,6 +18,8 @@ if TYPE_CHECKING:
 STEP_PX = 0.125
 """Distance between the points of an edge along its line. [px]"""
 
+_OVERLAP = 1e-3
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Line:
@@ -67,7 +69,8 @@ class Defect:
     ----------
     event : {"open", "bridge", "neck", "bulge", "void", "satellite"}
         An open parts the line, with round ends. A bridge joins `line` and the next one. Neck and bulge are dents
-        and bumps of one edge, Gaussian in shape. Void and satellite are round: a hole in the ink, a drop beside it.
+        and bumps of one edge, Gaussian in shape. Void and satellite are round: a hole in the ink, a drop beside it,
+        which ink joins to its line where it touches it.
     line : int
         Number of the line in the scene, from 0.
     at : float
@@ -124,6 +127,11 @@ class Scene:
     blur: float | tuple[tuple[float, float], ...] = 1.0
     direction: Literal["vertical", "horizontal"] = "vertical"
     tilt_deg: float = 0.0
+
+    @property
+    def gaussians(self) -> tuple[tuple[float, float], ...]:
+        """Weight and sigma of the Gaussians that make up the blur."""
+        return ((1.0, self.blur),) if isinstance(self.blur, int | float) else self.blur
 
     @property
     def axes(self) -> NDArray[np.float64]:
@@ -329,7 +337,7 @@ class Truth:
 def _running_mean(values: NDArray[np.float64], length: float) -> NDArray[np.float64]:
     count = max(1, round(length / STEP_PX))
     sums = np.cumsum(np.concatenate([[0.0], values]))
-    return (sums[count:] - sums[:-count]) / count
+    return np.asarray((sums[count:] - sums[:-count]) / count)
 
 
 def render(scene: Scene, rng: np.random.Generator) -> tuple[NDArray[np.float64], Truth]:
@@ -349,6 +357,11 @@ def render(scene: Scene, rng: np.random.Generator) -> tuple[NDArray[np.float64],
     truth : Truth
         What it shows.
 
+    Raises
+    ------
+    ValueError
+        When outlines of ink overlap where it can be seen, so that ink would count twice.
+
     Examples
     --------
     >>> scene = Scene(shape=(64, 48), lines=(Line(offset=0.0, width=20.0),))
@@ -356,12 +369,15 @@ def render(scene: Scene, rng: np.random.Generator) -> tuple[NDArray[np.float64],
     >>> image.shape, truth.lines[0].statistics().width_mean
     ((64, 48), 20.0)
     """
+    rows, cols = scene.shape
     lines = [_draw(scene, line, rng) for line in scene.lines]
-    defects, inked, bare = [], [], []
+    defects: list[DefectTruth] = []
+    inked: list[NDArray[np.float64]] = []
+    bare: list[NDArray[np.float64]] = []
     for defect in scene.defects:
         line = lines[defect.line]
         item = f"L{defect.line + 1}"
-        if defect.event in ("open", "neck", "bulge"):
+        if defect.event in ("open", "neck", "bulge") or (defect.event == "satellite" and _touches(line, defect)):
             lines[defect.line], across, area = _reshape(line, defect)
         elif defect.event == "bridge":
             item += f"..L{defect.line + 2}"
@@ -383,15 +399,17 @@ def render(scene: Scene, rng: np.random.Generator) -> tuple[NDArray[np.float64],
     ]
     # The raster is quickest for outlines that run down the picture: horizontal lines are rendered on their side.
     flip = slice(None, None, -1) if scene.direction == "horizontal" else slice(None)
-    blur = ((1.0, scene.blur),) if isinstance(scene.blur, int | float) else scene.blur
     share = blurred_coverage(
         [scene.to_picture(*outline.T)[:, flip] for outline in inked],
         [scene.to_picture(*outline.T)[:, flip] for outline in bare],
-        scene.shape[flip],
-        blur,
+        (cols, rows) if scene.direction == "horizontal" else (rows, cols),
+        scene.gaussians,
         round(1 / STEP_PX),
     )
     share = share.T if scene.direction == "horizontal" else share
+    if share.min() < -_OVERLAP or share.max() > 1 + _OVERLAP:
+        msg = "outlines overlap: lines too close, a defect that reaches another line, or a void that leaves its line"
+        raise ValueError(msg)
     image = scene.substrate + (scene.ink - scene.substrate) * share
     return image, Truth(scene=scene, lines=tuple(lines), defects=tuple(defects))
 
@@ -410,7 +428,8 @@ def _draw(scene: Scene, line: Line, rng: np.random.Generator) -> LineTruth:
     inside = max(c[0] for c in crossings), min(c[1] for c in crossings)
     if line.span:
         inside = max(inside[0], line.span[0]), min(inside[1], line.span[1])
-    reach = float(np.hypot(rows, cols)) / 2 + 10 * line.width
+    margin = 8 * max(sigma for _, sigma in scene.gaussians) + 8
+    reach = float(np.hypot(rows, cols)) / 2 + margin
     first, last = line.span or (-reach, reach)
     # Points on the half pixels' raster: an upright line's points then fall on the borders of the bands.
     first = np.floor(first / STEP_PX) * STEP_PX
@@ -438,25 +457,36 @@ def _uncross(left: NDArray[np.float64], right: NDArray[np.float64]) -> tuple[NDA
 
 
 def _reshape(line: LineTruth, defect: Defect) -> tuple[LineTruth, float, float]:
-    """Move the edges for an open, neck or bulge; return the line, the place across, and the area changed."""
+    """Move the edges for a defect that is part of the line; return the line, the place across, and the area changed."""
     s, left, right = line.along - defect.at, line.left, line.right
+    middle = (left + right) / 2
+    across = {"left": left, "right": right}[defect.side]
     if defect.event == "open":
         radius = line.line.width / 2
         to_end = np.clip((np.abs(s) - defect.size / 2) / radius, 0.0, 1.0)
         share = np.sqrt(1.0 - (1.0 - to_end) ** 2)
-        middle = (left + right) / 2
-        left, right = middle + share * (left - middle), middle + share * (right - middle)
+        left, right, across = middle + share * (left - middle), middle + share * (right - middle), middle
+    elif defect.event == "satellite":
+        # Ink wets the corner between drop and line: the edge runs around the drop, single-valued.
+        chord = np.sqrt(np.maximum((defect.size / 2) ** 2 - s**2, 0.0))
+        across = np.full_like(s, line.line.offset + defect.offset)
+        left = np.where(chord > 0, np.minimum(left, across - chord), left)
+        right = np.where(chord > 0, np.maximum(right, across + chord), right)
     else:
         sign = {"neck": -1, "bulge": 1}[defect.event] * {"left": -1, "right": 1}[defect.side]
         move = sign * defect.depth * np.exp2(-((2 * s / defect.size) ** 2))
         left, right = (left + move, right) if defect.side == "left" else (left, right + move)
         left, right = _uncross(left, right)
-    at = int(np.argmin(np.abs(s)))
-    across = {"open": (left + right) / 2, "left": left, "right": right}[
-        "open" if defect.event == "open" else defect.side
-    ][at]
     area = STEP_PX * np.sum(np.abs((right - left) - (line.right - line.left)))
-    return replace(line, left=left, right=right), float(across), float(area)
+    return replace(line, left=left, right=right), float(across[np.argmin(np.abs(s))]), float(area)
+
+
+def _touches(line: LineTruth, defect: Defect) -> bool:
+    """Whether a drop reaches its line."""
+    here = np.abs(line.along - defect.at) < defect.size / 2
+    chord = np.sqrt((defect.size / 2) ** 2 - (line.along[here] - defect.at) ** 2)
+    across = line.line.offset + defect.offset
+    return bool(np.any((across + chord > line.left[here]) & (across - chord < line.right[here])))
 
 
 def _bridge(one: LineTruth, two: LineTruth, defect: Defect) -> NDArray[np.float64]:
