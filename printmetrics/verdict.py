@@ -11,8 +11,8 @@ GUARD = 1.645
 
 DECISION_RULE = (
     f"in the manner of ISO 14253-1: conforming within the limits reduced by {GUARD} u, nonconforming outside the "
-    f"limits widened by {GUARD} u, undecided between, where u is unknown, where the reading is withheld or a decisive flag is "
-    "set; counts are compared as they are"
+    f"limits widened by {GUARD} u, undecided between; undecided too where u is unknown, the reading is withheld "
+    "or a decisive flag is set; counts are compared as they are"
 )
 
 Verdict = Literal["", "conforming", "nonconforming", "undecided"]
