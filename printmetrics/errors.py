@@ -32,9 +32,12 @@ class FeatureError(PrintmetricsError):
         What happened, where, and what to do.
     flags : Flag, optional
         Flags for the readings that are withheld because of it.
+    count : int, optional
+        Number of items found, where that is what was found: 0 on an unprinted web.
     """
 
-    def __init__(self, message: str, flags: Flag | None = None) -> None:
+    def __init__(self, message: str, flags: Flag | None = None, *, count: int | None = None) -> None:
         super().__init__(message)
+        self.count = count
         self.flags = flags if flags is not None else Flag.OUTSIDE_VALIDITY
 
