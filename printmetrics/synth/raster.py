@@ -103,7 +103,7 @@ def _blur(  # noqa: PLR0913, PLR0917  (one private place)
     bands_per_row: int,
 ) -> NDArray[np.float64]:
     rows, cols = shape
-    sigma = max(sigma, 1e-6)
+    sigma = max(sigma, 1e-9)  # no blur
     reach = int(np.ceil(_REACH_SIGMAS * sigma)) + 1
     low, high = np.searchsorted(band, (-reach * bands_per_row, (rows + reach) * bands_per_row))
     band, x, height = band[low:high], np.clip(x[low:high], -reach, cols - 1 + reach), height[low:high]
