@@ -133,6 +133,12 @@ def test_open_parts_the_line_by_its_size() -> None:
     assert (stats.width_min, stats.width_harmonic, stats.width_mean) == (0.0, 0.0, 20.0)
 
 
+# Source: a gap of 14 between two half discs across the line of 20.
+def test_ends_of_an_open_are_round() -> None:
+    _, truth = shown(lines_scene(defects=(DEFECTS["open"],)))
+    assert truth.defects[0].area == pytest.approx(14 * 20 + 20**2 * (1 - np.pi / 4), rel=1e-3)
+
+
 def test_neck_takes_its_depth_from_the_width() -> None:
     stats = shown(lines_scene(3, defects=(DEFECTS["neck"],)))[1].lines[1].statistics()
     assert stats.width_min == pytest.approx(12.0, abs=1e-3)
