@@ -91,8 +91,8 @@ camera looks at five straight runs of it, 20 um wide, 60 um apart, at 0.5 um per
 
 recipe.toml       what to measure, and the limits
 truth.csv         what the lines measure, exactly: "process" is what the endless line has, of which the picture
-                  shows a piece; "piece" what the piece in the recipe's region has; mean widths and spaces, lwr and ler are those
-                  without the defects, extremes and the harmonic width those with them
+                  shows a piece; "piece" what the piece in the recipe's region has. Mean widths and
+                  spaces, lwr and ler leave the defects out; extremes and the harmonic width count them
 truth_events.csv  where the defects are
 R07_*             the pictures: roll, metres along it, lane
 
