@@ -21,7 +21,8 @@ ROWS_PER_BLOCK = 96  # the levels are constant over this many rows, and interpol
 MIN_BLUR_PX, MAX_BLUR_PX = 0.35, 40.0
 _REACH = 4.0  # window beyond the edge, in blurs
 _FEWEST_ROWS = 8  # a block with fewer good rows has no levels of its own
-_MISFIT_SIGMAS = 6.0
+_MISFIT_SIGMAS = 6.0  # a row is a defect's when its residual stands out of the noise by this much,
+_MISFIT_STEP = 0.1  # and its rms is this part of the step: a rough edge alone leaves less
 
 
 def position_bound(blur_px: float, contrast: float, noise: float) -> float:
@@ -264,18 +265,17 @@ def fit_edges(
         terms += [[(3 * k - 2, 1.0)], [(3 * j + 3, -steps[j]) for j in range(k)]]
         inverse = _inverse([[functions.product(a, b) for b in place] for a in place])
         score = [sum(w * dots[f] for f, w in a) for a in place]
-        move = np.stack([sum(inverse[i][j] * score[j] for j in range(k)) for i in range(k)])
+        move = np.einsum("ijm,jm->im", inverse, np.array(score))
         # The positions are eliminated: what is left of the shared terms' normal equations is summed over rows.
         cross = [[functions.product(a, b) for b in terms] for a in place]
-        gain = np.stack(
-            [[sum(inverse[i][j] * cross[j][a] for j in range(k)) for a in range(k + 2)] for i in range(k)]
-        )
+        gain = np.einsum("ijm,jam->iam", inverse, np.array(cross))
         squares = np.einsum("ij,ij->i", residual, residual) - sum(move[i] * score[i] for i in range(k))
         typical = float(np.median(squares[weight > 0] if weight.any() else squares))
         noise = math.sqrt(max(typical, 1e-12) / (dof * (1 - 2 / (9 * dof)) ** 3))
         misfit = np.sqrt(np.maximum(squares, 0.0) / dof) / noise
         # A row hit by a defect has no say in what is shared.
-        good = (misfit**2 < worst) & (np.abs(move) < 2 * blur + 1).all(axis=0)
+        limit = max(worst, (_MISFIT_STEP * float(np.ptp(row_levels, axis=1).mean()) / noise) ** 2)
+        good = (misfit**2 < limit) & (np.abs(move) < 2 * blur + 1).all(axis=0)
         w = weight * good if (weight * good).sum() > n_rows / 4 else weight
         big = np.empty((len(bounds), k + 2, k + 2))
         for a in range(k + 2):
@@ -302,28 +302,30 @@ def fit_edges(
     position[:, ~keep] = np.nan
     used = w * keep
     total = max(float(used.sum()), 1.0)
-    own = np.array([[np.sum(inverse[i][j] * used) for j in range(k)] for i in range(k)]) / total**2
+    own = (inverse * used).sum(axis=2) / total**2
     mean_gain = np.add.reduceat(gain * used, bounds, axis=2) / total
+    u_row = np.sqrt(np.median(inverse[range(k), range(k)], axis=1)) * noise
     return EdgeFit(
         position=position.T,
-        u_row=np.array([math.sqrt(float(np.median(inverse[i][i]))) for i in range(k)]) * noise,
+        u_row=u_row,
         mean_covariance=(own + shared_fit.carried(mean_gain)) * noise**2,
-        blur=blur,
+        # Each row's position follows its noise, which makes the aligned edge look sharper by just that variance.
+        blur=blur if fixed_blur else math.hypot(blur, float(u_row.mean())),
         levels=shared,
         noise=noise,
         misfit=misfit,
     )
 
 
-def _inverse(matrix: list[list[Any]]) -> list[list[Any]]:
-    """Invert a 1 x 1 or 2 x 2 matrix of arrays; a singular one gives small numbers, not infinite ones."""
+def _inverse(matrix: list[list[Any]]) -> NDArray[np.float64]:
+    """Invert a small matrix of arrays, shape (k, k, m); a singular one gives small numbers, not infinite ones."""
     floor = 1e-4 * np.median(matrix[0][0]) + 1e-12
-    if len(matrix) == 1:
-        return [[1.0 / (matrix[0][0] + floor)]]
-    (a, b), (_, d) = matrix
-    a, d = a + floor, d + floor
-    det = np.maximum(a * d - b * b, floor * floor)
-    return [[d / det, -b / det], [-b / det, a / det]]
+    k = len(matrix)
+    if k == 1:
+        return np.asarray(1.0 / (matrix[0][0] + floor))[None, None]
+    full = np.stack([np.stack(row) for row in matrix])
+    full[range(k), range(k)] += floor
+    return np.moveaxis(np.linalg.inv(np.moveaxis(full, 2, 0)), 0, 2)
 
 
 class _SharedFit:

@@ -17,7 +17,7 @@ _BANDS, _BAND_ROWS = 8, 12  # the direction is taken from this much of a large p
 _BLOCKS = 64  # so many blocks along the lines, where there are rows enough
 _BLOCK_ROWS = 2, 32
 _ROWS_USED = 8  # of each block, enough to lift a line out of the noise
-_SMOOTH_PX = 1.0
+SMOOTH_PX = (1.0, 3.0)  # the second is tried where the first finds nothing: strong blur in strong noise
 _NOISE_SIGMAS = 6.0  # a step counts when it stands out of the noise by this much
 _RELATIVE_STEP = 0.12  # and is at least this part of the picture's strong steps
 _COVERED = 0.4  # a line shows its edges over at least this part of its way through the region
@@ -59,7 +59,7 @@ class CoarseLine:
     right: NDArray[np.float64]
 
 
-def find_direction(image: NDArray[Any], *, vertical: bool | None = None) -> Direction:
+def find_direction(image: NDArray[Any], *, vertical: bool | None = None, smooth: float = SMOOTH_PX[0]) -> Direction:
     """Return the direction in which most edges run, within 30 degrees of an axis.
 
     Parameters
@@ -68,6 +68,8 @@ def find_direction(image: NDArray[Any], *, vertical: bool | None = None) -> Dire
         Picture. [counts]
     vertical : bool, optional
         Look only at lines along the columns (True) or the rows (False).
+    smooth : float, optional
+        Gaussian sigma of the smoothing. [px]
 
     Returns
     -------
@@ -81,10 +83,10 @@ def find_direction(image: NDArray[Any], *, vertical: bool | None = None) -> Dire
     votes = np.zeros(180)
     for axis in (0, 1):
         size = image.shape[axis]
-        band = min(_BAND_ROWS, size)
+        band = min(round(_BAND_ROWS * smooth), size)
         for start in np.unique(np.linspace(0, size - band, _BANDS).astype(int)):
             part = image[start : start + band] if axis == 0 else image[:, start : start + band]
-            votes += _angle_votes(np.ascontiguousarray(part, dtype=np.float32))
+            votes += _angle_votes(np.ascontiguousarray(part, dtype=np.float32), smooth)
     votes = sum(np.roll(votes, k) for k in range(-2, 3))  # type: ignore[assignment]
     reach = round(MAX_TILT_DEG) + 2
     near = np.arange(-reach, reach + 1)
@@ -101,8 +103,8 @@ def find_direction(image: NDArray[Any], *, vertical: bool | None = None) -> Dire
     return Direction(upright, slope, best[not upright] / max(best[upright], 1e-30))
 
 
-def _angle_votes(part: NDArray[np.float32]) -> NDArray[np.float64]:
-    part = cv2.GaussianBlur(part, (0, 0), 1.2)
+def _angle_votes(part: NDArray[np.float32], smooth: float) -> NDArray[np.float64]:
+    part = cv2.GaussianBlur(part, (0, 0), 1.2 * smooth)
     gx = cv2.Sobel(part, cv2.CV_32F, 1, 0)
     gy = cv2.Sobel(part, cv2.CV_32F, 0, 1)
     power = gx * gx + gy * gy
@@ -146,7 +148,9 @@ def block_profiles(image: NDArray[Any], slope: float, rows: int) -> tuple[NDArra
     return total / np.maximum(seen, 1), np.arange(count) * rows + (rows - 1) / 2
 
 
-def find_lines(image: NDArray[Any], slope: float, *, bright: bool) -> list[CoarseLine]:
+def find_lines(
+    image: NDArray[Any], slope: float, *, bright: bool, smooth: float = SMOOTH_PX[0]
+) -> list[CoarseLine]:
     """Find the lines that run along the columns.
 
     Parameters
@@ -157,6 +161,8 @@ def find_lines(image: NDArray[Any], slope: float, *, bright: bool) -> list[Coars
         Change of column per row along the lines.
     bright : bool
         Ink brighter than what surrounds it.
+    smooth : float, optional
+        Gaussian sigma of the smoothing across the lines. [px]
 
     Returns
     -------
@@ -173,7 +179,7 @@ def find_lines(image: NDArray[Any], slope: float, *, bright: bool) -> list[Coars
     profiles, centre = block_profiles(image, slope, rows)
     if not len(centre):
         return []
-    pieces = _pieces(profiles, bright=bright)
+    pieces = _pieces(profiles, smooth, bright=bright)
     chains = _chains(pieces, centre, slope)
     lines = _join(chains, slope)
     kept = [line for line in lines if _covered(line, image.shape[1], centre) >= _COVERED]
@@ -181,16 +187,16 @@ def find_lines(image: NDArray[Any], slope: float, *, bright: bool) -> list[Coars
     return sorted(kept, key=lambda c: float(np.median((c.left + c.right) / 2 - slope * (c.rows - middle))))
 
 
-def _pieces(profiles: NDArray[np.float32], *, bright: bool) -> list[NDArray[np.float64]]:
+def _pieces(profiles: NDArray[np.float32], scale: float, *, bright: bool) -> list[NDArray[np.float64]]:
     """Return for each block the left and right edges of what looks like ink, shape (n, 2)."""
-    smooth = cv2.GaussianBlur(profiles, (0, 0), sigmaX=_SMOOTH_PX, sigmaY=1e-3)
+    smooth = cv2.GaussianBlur(profiles, (0, 0), sigmaX=scale, sigmaY=1e-3)
     step = np.zeros_like(smooth)
     step[:, 1:-1] = smooth[:, 2:] - smooth[:, :-2]
     if not bright:
         step = -step
     # The noise of the difference of two means, from the differences between neighbouring blocks' pixels.
     rough = np.diff(profiles, axis=1)
-    noise = 1.4826 * float(np.median(np.abs(rough - np.median(rough)))) / math.sqrt(2) * _STEP_NOISE
+    noise = 1.4826 * float(np.median(np.abs(rough - np.median(rough)))) / math.sqrt(2) * _step_noise(scale)
     size = np.abs(step)
     strong = float(np.percentile(size.max(axis=1), 50))
     least = max(_NOISE_SIGMAS * noise, _RELATIVE_STEP * strong, 1e-6 * float(np.abs(profiles).max()) + 1e-12)
@@ -218,7 +224,10 @@ def _pieces(profiles: NDArray[np.float32], *, bright: bool) -> list[NDArray[np.f
     return found
 
 
-_STEP_NOISE = math.sqrt(2) * 0.53  # sd of smooth(x+1) - smooth(x-1) over that of a pixel, for a sigma of 1 px
+def _step_noise(scale: float) -> float:
+    """Return the sd of smooth(x + 1) - smooth(x - 1) over that of a pixel."""
+    power = 1.0 / (2.0 * math.sqrt(math.pi) * scale)
+    return math.sqrt(2.0 * power * (1.0 - math.exp(-1.0 / scale**2)))
 
 
 class _Chain:

@@ -1,0 +1,243 @@
+"""Defects of lines: ink missing where a line runs, ink in excess where none should be."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import cv2
+import numpy as np
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+_STAND_OUT = 10.0  # half the contrast stands five noise sds out of the smoothed picture
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Defect:
+    """One defect.
+
+    Parameters
+    ----------
+    kind : str
+        ``open``, ``neck``, ``void``, ``bridge``, ``bulge`` or ``satellite``.
+    line : int
+        Index of the line; for a bridge or satellite, of the line left of the space. -1: left of the first.
+    left, right : bool
+        Whether it touches the left, the right edge of the line (or the line left, right of the space).
+    rows : tuple of int
+        First and last row. [px]
+    x, y : float
+        Centre of its area. [px]
+    extent : float
+        Its length in rows; of a bridge or an open, where it is shortest. [px]
+    area : float
+        Its area. [px^2]
+    outline : ndarray of float, shape (n, 2)
+        Outer contour, x and y. [px]
+    """
+
+    kind: str
+    line: int
+    left: bool
+    right: bool
+    rows: tuple[int, int]
+    x: float
+    y: float
+    extent: float
+    area: float
+    outline: NDArray[np.float64]
+
+
+def ink_mask(image: NDArray[Any], threshold: NDArray[np.float32] | float, smooth: int, *, bright: bool) -> NDArray[Any]:
+    """Return where the picture is inked.
+
+    Parameters
+    ----------
+    image : ndarray, shape (M, N)
+        Picture. [counts]
+    threshold : float or ndarray of float32, shape (m, n)
+        Middle between ink and bare web; an array is stretched over the picture. [counts]
+    smooth : int
+        Side of the averaging square, odd; 1 for none. [px]
+    bright : bool
+        Ink brighter than the web.
+
+    Returns
+    -------
+    ndarray of uint8, shape (M, N)
+        255 where inked, else 0.
+    """
+    seen = cv2.blur(image, (smooth, smooth)) if smooth > 1 else image
+    if np.ndim(threshold):
+        size = (image.shape[1], image.shape[0])
+        limit = cv2.resize(np.asarray(threshold, np.float32), size, interpolation=cv2.INTER_LINEAR)
+        return np.asarray(cv2.compare(seen.astype(np.float32), limit, cv2.CMP_GT if bright else cv2.CMP_LT))
+    kind = cv2.THRESH_BINARY if bright else cv2.THRESH_BINARY_INV
+    level = math.floor(float(threshold)) if seen.dtype == np.uint8 and bright else float(threshold)
+    if seen.dtype == np.uint8 and not bright:
+        level = math.ceil(level) - 1
+    mask = cv2.threshold(seen, level, 255, kind)[1]
+    return np.asarray(mask if mask.dtype == np.uint8 else mask.astype(np.uint8))
+
+
+def smoothing(contrast: float, noise: float) -> int:
+    """Return the averaging square that lets half the contrast stand out of the noise.
+
+    Parameters
+    ----------
+    contrast, noise : float
+        Step height and noise sd of a pixel. [counts]
+
+    Returns
+    -------
+    int
+        Odd side of the square. [px]
+    """
+    return 2 * (math.ceil(min(_STAND_OUT * noise / max(contrast, 1e-12), 9)) // 2) + 1
+
+
+def find_defects(
+    ink: NDArray[Any],
+    left: NDArray[np.float64],
+    right: NDArray[np.float64],
+    slack: NDArray[np.float64],
+    margin: float,
+    least_area: float,
+) -> list[Defect]:
+    """Compare the ink seen with the ink expected.
+
+    Parameters
+    ----------
+    ink : ndarray of uint8, shape (M, N)
+        255 where inked.
+    left, right : ndarray of float, shape (K, M)
+        Course of each line's edges, left to right; NaN where the line isn't in the picture. [px]
+    slack : ndarray of float, shape (K, 2)
+        How far from the course an edge may be and still be rough, not defective. [px]
+    margin : float
+        How far beyond the outermost lines excess ink is looked for. [px]
+    least_area : float
+        Smallest area that counts. [px^2]
+
+    Returns
+    -------
+    list of Defect
+        From top to bottom.
+
+    Notes
+    -----
+    An open is bare web that joins both sides of a line, a bridge is ink that joins two lines: both are judged on
+    the whole mask around the finding, so a film of half contrast or a crack much finer than the blur isn't seen.
+    """
+    height, width = ink.shape
+    core, gaps = np.zeros_like(ink), np.zeros_like(ink)
+    for k in range(len(left)):
+        _fill(core, left[k] + slack[k, 0], right[k] - slack[k, 1])
+    edges = [(left[0] - slack[0, 0] - margin, left[0] - slack[0, 0])]
+    edges += [
+        (right[k] + slack[k, 1], left[k + 1] - slack[k + 1, 0]) for k in range(len(left) - 1)
+    ]
+    edges.append((right[-1] + slack[-1, 1], right[-1] + slack[-1, 1] + margin))
+    for a, b in edges:
+        _fill(gaps, a, b)
+    found: list[Defect] = []
+    bare = cv2.bitwise_and(core, cv2.bitwise_not(ink))
+    excess = cv2.bitwise_and(gaps, ink)
+    del core, gaps
+    for mask, missing in ((bare, True), (excess, False)):
+        for box, inside, area in _components(mask, least_area):
+            look = _Look(ink, left, right, slack, box, inside, missing=missing)
+            found.append(look.defect(area))
+    return sorted(found, key=lambda d: (d.rows[0], d.x))
+
+
+def _fill(mask: NDArray[Any], a: NDArray[np.float64], b: NDArray[np.float64]) -> None:
+    """Draw the band of pixels whose centres lie between two courses."""
+    known = np.isfinite(a) & np.isfinite(b) & (b > a)
+    if not known.any():
+        return
+    step = max(1, len(a) // 1024)
+    rows = np.nonzero(known)[0]
+    rows = rows[(np.arange(len(rows)) % step == 0) | (rows == rows[-1])]
+    outline = np.concatenate([
+        np.column_stack([np.ceil(a[rows]), rows]), np.column_stack([np.floor(b[rows]), rows])[::-1]
+    ])
+    cv2.fillPoly(mask, [np.rint(outline).astype(np.int32)], 255)
+
+
+def _components(mask: NDArray[Any], least_area: float) -> list[tuple[tuple[int, int, int, int], NDArray[Any], float]]:
+    """Return bounding box, mask and area of each connected part."""
+    if not cv2.countNonZero(mask):
+        return []
+    x, y, w, h = cv2.boundingRect(mask)
+    _, labels, stats, _ = cv2.connectedComponentsWithStats(np.ascontiguousarray(mask[y : y + h, x : x + w]), connectivity=8)
+    found = []
+    for k in np.nonzero(stats[1:, cv2.CC_STAT_AREA] >= least_area)[0] + 1:
+        bx, by, bw, bh, area = (int(v) for v in stats[k])
+        part = labels[by : by + bh, bx : bx + bw] == k
+        found.append(((bx + x, by + y, bw, bh), part, float(area)))
+    return found
+
+
+class _Look:
+    """A closer look at one finding: what it touches."""
+
+    def __init__(
+        self, ink: NDArray[Any], left: NDArray[np.float64], right: NDArray[np.float64], slack: NDArray[np.float64],
+        box: tuple[int, int, int, int], inside: NDArray[np.bool_], *, missing: bool,
+    ) -> None:
+        self.box, self.inside, self.missing = box, inside, missing
+        x, y, w, h = box
+        rows = np.arange(y, y + h)
+        columns, counts = np.nonzero(inside)[1] + x, np.nonzero(inside)[0]
+        middle = y + int(np.median(counts))
+        at = float(np.median(columns))
+        if missing:
+            centres = np.where(np.isfinite(left[:, middle]), (left[:, middle] + right[:, middle]) / 2, np.inf)
+            self.line = int(np.argmin(np.abs(centres - at)))
+            k = self.line
+            a, b = left[k, rows] - slack[k, 0] - 1, right[k, rows] + slack[k, 1] + 1
+        else:
+            self.line = int(np.sum(left[:, middle] < at)) - 1
+            k = self.line
+            a = right[k, rows] - slack[k, 1] - 1 if k >= 0 else np.full(h, -np.inf)
+            b = left[k + 1, rows] + slack[k + 1, 0] + 1 if k + 1 < len(left) else np.full(h, np.inf)
+        # What it joins is judged in its own rows only, so that nothing is joined around its ends.
+        low = int(np.clip(np.nanmin(np.where(np.isfinite(a), a, x - 2)) - 1, 0, ink.shape[1] - 1))
+        high = int(np.clip(np.nanmax(np.where(np.isfinite(b), b, x + w + 2)) + 2, low + 1, ink.shape[1]))
+        low, high = min(low, x), max(high, x + w)
+        part = ink[y : y + h, low:high] == 0 if missing else ink[y : y + h, low:high] > 0
+        _, labels = cv2.connectedComponents(part.astype(np.uint8), connectivity=4 if missing else 8)
+        own = np.unique(labels[:, x - low : x - low + w][inside & part[:, x - low : x - low + w]])
+        whole = np.isin(labels, own[own > 0])
+        place = np.arange(low, high)[None, :]
+        self.left = bool((whole & (place <= a[:, None])).any())
+        self.right = bool((whole & (place >= b[:, None])).any())
+        self.whole, self.low = whole & (place > a[:, None]) & (place < b[:, None]), low
+        # Columns counted from the course, so that a tilted line's defect is not cut askew.
+        reference = a if np.isfinite(a).all() else b if np.isfinite(b).all() else np.full(h, float(x))
+        offset = np.rint(columns - reference[counts]).astype(int)
+        self.across = np.bincount(offset - offset.min())
+
+    def defect(self, area: float) -> Defect:
+        """Name it."""
+        x, y, _, h = self.box
+        both, one = self.left and self.right, self.left or self.right
+        kind = ("open" if both else "neck" if one else "void") if self.missing else (
+            "bridge" if both else "bulge" if one else "satellite")
+        body = self.whole if self.whole.any() else self.inside
+        shift = self.low if self.whole.any() else x
+        rows, columns = np.nonzero(body)
+        extent = float(h)
+        if kind in ("bridge", "open"):
+            inner = self.across[len(self.across) // 8 : len(self.across) - len(self.across) // 8]
+            extent = float(inner[inner > 0].min())
+        contour = max(cv2.findContours(body.astype(np.uint8), cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_SIMPLE)[0], key=len)
+        return Defect(
+            kind=kind, line=self.line, left=self.left, right=self.right, rows=(y, y + h - 1),
+            x=float(columns.mean() + shift), y=float(rows.mean() + y), extent=extent,
+            area=max(area, float(body.sum())), outline=contour[:, 0].astype(np.float64) + (shift, y),
+        )
