@@ -1,0 +1,1 @@
+"""Pictures in, tables out: everything that knows a file format."""
