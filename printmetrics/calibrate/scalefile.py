@@ -133,7 +133,9 @@ def read_scale_file(path: Path) -> ScaleFile:
     try:
         return ScaleFile.model_validate_json(text)
     except ValidationError as error:
-        problems = {str(e["loc"][0]): _WORDS.get(e["type"], "wrong") for e in error.errors()}
+        problems = {
+            str(e["loc"][0]): _WORDS.get(e["type"], "wrong") if len(e["loc"]) == 1 else "wrong" for e in error.errors()
+        }
         listed = ", ".join(f'"{key}" is {problem}' for key, problem in problems.items())
         msg = f"scale file {path} cannot be used: {listed}; correct it or make it again"
         raise ScaleError(msg) from error

@@ -205,6 +205,7 @@ def _text(path: Path, group: list[ErrorDetails], raw: dict[str, Any], schema: di
         text = str(ctx["text"])
     elif kind == "value_error":
         text = str(ctx["error"])
+        text += "" if ";" in text else "; correct it"
     elif kind == "extra_forbidden" and path == ("locate",):
         text = "is not available in this version; remove it, and give regions and centres as they are in the pictures"
     elif kind == "extra_forbidden":
