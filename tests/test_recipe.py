@@ -7,14 +7,16 @@ import re
 import tomllib
 from pathlib import Path
 
+import cv2
 import jsonschema
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
 from printmetrics.errors import PictureError, RecipeError
 from printmetrics.flags import Flag
-from printmetrics.recipe import CONTEXT_COLUMNS, Recipe, load_recipe, moment
+from printmetrics.recipe import CONTEXT_COLUMNS, Recipe, correction_sizes, load_recipe, moment
 from printmetrics.recipe.problems import line_numbers
 
 RECIPE = r"""schema = 1
@@ -166,7 +168,7 @@ MISTAKES = {
     "pattern without groups": ("(?P<roll>[^_]+)", ".*'\n#", "", "context", "has no named group", "(?P<lot>...)"),
     "zone by name": ('"+01:00"', '"CET"', "", "time_zone", 'key "time_zone": must be an offset', '"+01:00"'),
     "zone too far": ('"+01:00"', '"+77:00"', "", "time_zone", 'key "time_zone": must be an offset', '"+01:00"'),
-    "pattern outside": ('"*.tif"', '"../*.tif"', "", "include", 'key "include", entry 1', "inside the folder"),
+    "pattern outside": ('"*.tif"', '"../*.tif"', "", "include", 'key "include", entry 1', "without folders"),
     "locate": ("[web]", '[locate]\nmodel = "rigid"\n[web]', "", "[web]", "section [locate]: is not available",
                "remove it"),
 }  # fmt: skip
@@ -293,6 +295,41 @@ def test_a_file_below_the_recipes_folder_is_found(tmp_path: Path) -> None:
     (tmp_path / "sub" / "flat.tif").write_bytes(b"x")
     recipe = load(tmp_path, "gamma = 1.0", "flat_field = 'sub/flat.tif'")
     assert recipe.files == {"flat_field": tmp_path / "sub" / "flat.tif"}
+
+
+def corrections(folder: Path, **sizes: tuple[int, int]) -> Recipe:
+    for name, (width, height) in sizes.items():
+        cv2.imwrite(str(folder / f"{name}.png"), np.zeros((height, width), np.uint8))
+    return load(folder, "gamma = 1.0", "flat_field = 'flat.png'\ndark = 'dark.png'")
+
+
+def test_corrections_of_one_size_are_fine(tmp_path: Path) -> None:
+    recipe = corrections(tmp_path, flat=(8, 6), dark=(8, 6))
+    assert correction_sizes(recipe) == {"flat_field": (8, 6), "dark": (8, 6)}
+
+
+def test_corrections_of_two_sizes_are_refused(tmp_path: Path) -> None:
+    recipe = corrections(tmp_path, flat=(8, 6), dark=(6, 8))
+    with pytest.raises(
+        RecipeError, match="flat_field has 8 x 6 px, dark has 6 x 8 px; they must have one size: take them"
+    ):
+        correction_sizes(recipe)
+
+
+def test_a_correction_of_another_size_than_the_scale_is_refused(tmp_path: Path) -> None:
+    (tmp_path / "s.scale.json").write_text(json.dumps(SCALE_FILE))
+    cv2.imwrite(str(tmp_path / "dark.png"), np.zeros((6, 8), np.uint8))
+    path = tmp_path / "R.toml"
+    path.write_text(RECIPE.replace(BY_HAND, "file = 's.scale.json'").replace("gamma = 1.0", "dark = 'dark.png'"))
+    with pytest.raises(RecipeError, match="dark has 8 x 6 px, the scale file has 640 x 480 px"):
+        correction_sizes(load_recipe(path))
+
+
+def test_a_correction_that_is_no_picture_is_refused(tmp_path: Path) -> None:
+    (tmp_path / "flat.png").write_text("text")
+    recipe = load(tmp_path, "gamma = 1.0", "flat_field = 'flat.png'")
+    with pytest.raises(RecipeError, match=r"R\.toml: flat_field 'flat\.png' cannot be used: "):
+        correction_sizes(recipe)
 
 
 def test_recipe_id_ignores_comments_order_and_the_folder(tmp_path: Path) -> None:

@@ -11,7 +11,7 @@ import click
 
 from printmetrics.errors import RecipeError
 from printmetrics.quantities import CATALOGUE
-from printmetrics.recipe import Recipe, load_recipe
+from printmetrics.recipe import Recipe, correction_sizes, load_recipe
 
 if TYPE_CHECKING:
     from printmetrics.measure.options import FeatureOptions, Limits
@@ -29,10 +29,13 @@ def recipe() -> None:
 def check(file: Path) -> None:
     """Check a recipe and all it refers to, and say what it will do."""
     checked = load_recipe(file)
+    sizes = correction_sizes(checked)
     click.echo(f"{file}: the recipe is valid")
     words = [checked.name, checked.version and f"version {checked.version}", checked.layer and f"layer {checked.layer}"]
     click.echo(f"  recipe   {', '.join(word for word in words if word)}; id {checked.recipe_id}")
     click.echo(f"  scale    {_scale(checked)}; id {checked.scale_id}")
+    for role, (width, height) in sizes.items():
+        click.echo(f"  correct  {role}: {width} x {height} px")
     for feature in checked.features:
         region = (
             "the whole picture" if feature.region is None else "x {:g}, y {:g}, {:g} x {:g}".format(*feature.region)

@@ -1,7 +1,7 @@
 """The recipe: what to measure, where, with which limits."""
 
 from printmetrics.recipe.context import CONTEXT_COLUMNS, moment
-from printmetrics.recipe.load import load_recipe
+from printmetrics.recipe.load import correction_sizes, load_recipe
 from printmetrics.recipe.model import Correct, Images, Optics, Recipe, ScaleSource, Web
 
 __all__ = [
@@ -12,6 +12,7 @@ __all__ = [
     "Recipe",
     "ScaleSource",
     "Web",
+    "correction_sizes",
     "load_recipe",
     "moment",
 ]

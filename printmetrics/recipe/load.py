@@ -9,7 +9,7 @@ from pathlib import Path
 
 from pydantic import ValidationError
 
-from printmetrics.errors import RecipeError
+from printmetrics.errors import PictureError, RecipeError
 from printmetrics.recipe.model import Recipe
 from printmetrics.recipe.problems import explain, line_numbers
 
@@ -59,6 +59,46 @@ def load_recipe(path: str | Path) -> Recipe:
     except OSError as error:
         msg = f"{path.name}: {error.filename} cannot be read: {error.strerror}; check your access rights"
         raise RecipeError(msg) from error
+
+
+def correction_sizes(recipe: Recipe) -> dict[str, tuple[int, int]]:
+    """Read the flat field and the dark picture, and see that they fit each other and the scale file.
+
+    Parameters
+    ----------
+    recipe : Recipe
+        A checked recipe.
+
+    Returns
+    -------
+    dict
+        Width and height by role. [px]
+
+    Raises
+    ------
+    RecipeError
+        When one cannot be read as a picture, or their sizes differ.
+    """
+    from printmetrics.io.pictures import Found, read_picture  # noqa: PLC0415  (slow to load, seldom needed)
+
+    sizes = {}
+    for role, path in recipe.files.items():
+        if role == "scale":
+            continue
+        try:
+            height, width = read_picture(Found(path, path.name)).pixels.shape[:2]
+        except PictureError as error:
+            msg = f"{recipe.path.name}: {role} {path.name!r} cannot be used: {error}"
+            raise RecipeError(msg) from error
+        sizes[role] = (width, height)
+    compared = sizes | ({"the scale file": recipe.scale_size} if recipe.scale_size else {})
+    if len(set(compared.values())) > 1:
+        listed = ", ".join(f"{role} has {width} x {height} px" for role, (width, height) in compared.items())
+        msg = (
+            f"{recipe.path.name}: {listed}; they must have one size: take them with the camera set as for the pictures"
+        )
+        raise RecipeError(msg)
+    return sizes
 
 
 def _syntax(message: str, file: str) -> str:

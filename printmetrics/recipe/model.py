@@ -124,8 +124,8 @@ def _time_zone(text: str) -> str:
 
 
 def _glob(pattern: str) -> str:
-    if not pattern or Path(pattern).is_absolute() or ".." in Path(pattern).parts:
-        msg = f"{pattern!r} must be a pattern of file names inside the folder, such as '*.tif'"
+    if not pattern or "/" in pattern or "\\" in pattern:
+        msg = f"{pattern!r} must be a pattern of file names without folders, such as '*.tif'"
         raise _fault(msg)
     return pattern
 
@@ -293,7 +293,13 @@ class Recipe(_Section):
         return self
 
     def model_post_init(self, context: Any, /) -> None:  # noqa: ANN401  (pydantic's signature)
-        """Read what the recipe refers to."""
+        """Read what the recipe refers to.
+
+        Parameters
+        ----------
+        context : dict or None
+            The recipe's ``folder`` and ``file``.
+        """
         context = context or {}
         self._path = context.get("folder", Path.cwd()) / context.get("file", "")
         for role, path in self.files.items():
@@ -322,6 +328,11 @@ class Recipe(_Section):
         """Hash of the scale with the content of its file."""
         digests = {role: digest for role, digest in self._digests.items() if role == "scale"}
         return _hash(self.scale.model_dump(mode="json"), digests)
+
+    @property
+    def scale_size(self) -> tuple[int, int] | None:
+        """Width and height of the pictures that the scale file was made for, where it says so, in px."""
+        return self._scale_file.picture_size_px if self._scale_file else None
 
     @property
     def length_unit(self) -> str:

@@ -10,6 +10,8 @@ import tomllib
 from pathlib import Path
 
 import click
+import cv2
+import numpy as np
 import pytest
 from click.testing import CliRunner, Result
 
@@ -55,6 +57,16 @@ def test_check_says_what_the_recipe_will_do(recipe: Path) -> None:
     assert "bus: lines, in x 10, y 20, 300 x 400" in done.stdout
     assert "width_mean lower 18, upper 22.5 um\n" in done.stdout
     assert "open_count upper 0\n" in done.stdout
+
+
+def test_check_reads_the_corrections(recipe: Path) -> None:
+    recipe.write_text(RECIPE.replace("[[feature]]", "[correct]\nflat_field = 'flat.png'\n[[feature]]"))
+    cv2.imwrite(str(recipe.with_name("flat.png")), np.full((6, 8), 200, np.uint8))
+    assert "flat_field: 8 x 6 px" in run("recipe", "check", recipe).stdout
+    recipe.with_name("flat.png").write_text("no picture")
+    done = run("recipe", "check", recipe)
+    assert done.exit_code == 2
+    assert "R.toml: flat_field 'flat.png' cannot be used" in done.stderr
 
 
 def test_notes_go_to_stderr(recipe: Path) -> None:
