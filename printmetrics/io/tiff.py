@@ -229,13 +229,12 @@ def _picture(
         stored = np.moveaxis(stored, 0, -1)
     pixels = np.ascontiguousarray(stored, dtype=stored.dtype.newbyteorder("="))
     bits = header.bits
-    if header.photometric == _PALETTE:
-        if colours is None or pixels.dtype.kind != "u":
-            msg = "its palette is missing; save it as RGB"
-            raise PictureError(msg)
-        return _with_palette(pixels, colours)
     if pixels.dtype == np.bool_:
-        pixels, full_scale = pixels.view(np.uint8) * np.uint8(255), 255
+        pixels = pixels.view(np.uint8)
+    if header.photometric == _PALETTE:
+        return _with_palette(pixels, bits, colours)
+    if bits == 1:
+        pixels, full_scale = pixels * np.uint8(255), 255
     elif pixels.dtype == np.uint16 and bits == 16:  # noqa: PLR2004
         bits, full_scale = find_depth(pixels, declared)
     elif pixels.dtype in (np.uint8, np.uint16):
@@ -253,9 +252,11 @@ def _picture(
     return pixels, bits, full_scale
 
 
-def _with_palette(indices: NDArray[Any], colours: NDArray[np.uint16]) -> tuple[NDArray[Any], int, float]:
-    if int(indices.max()) >= colours.shape[1]:
-        msg = "its pixels point outside its palette; it is damaged"
+def _with_palette(
+    indices: NDArray[Any], bits: int, colours: NDArray[np.uint16] | None
+) -> tuple[NDArray[Any], int, float]:
+    if colours is None or colours.shape != (3, 2**bits) or indices.dtype.kind != "u":
+        msg = "its palette is missing or damaged; save it as RGB"
         raise PictureError(msg)
     high = (colours >> 8).astype(np.uint8)
     # Colours of 8 bits are written either times 257 or times 256.

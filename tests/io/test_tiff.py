@@ -106,6 +106,14 @@ def test_palette_becomes_colour(tmp_path: Path, factor: int, kind: type) -> None
     assert picture.pixels.dtype == kind
 
 
+def test_a_damaged_palette_is_refused(tmp_path: Path) -> None:
+    path = written(tmp_path / "x.tif", noise(), photometric="palette", colormap=np.zeros((3, 256), np.uint16))
+    with tifffile.TiffFile(path, mode="r+") as tif:
+        tif.pages[0].tags[320].overwrite([1, 2, 3])
+    with pytest.raises(PictureError, match="palette is missing or damaged"):
+        read(path)
+
+
 @pytest.mark.parametrize("kind", [np.float16, np.float32, np.float64])
 def test_floats_become_float32(tmp_path: Path, kind: type) -> None:
     pixels = np.random.default_rng(1).normal(0, 1, (9, 7)).astype(kind)
