@@ -148,9 +148,9 @@ def find_defects(
     excess = cv2.bitwise_and(gaps, ink)
     del core, gaps
     for mask, missing in ((bare, True), (excess, False)):
-        for box, inside, area in _components(mask, least_area):
+        for box, inside in _components(mask, least_area):
             look = _Look(ink, left, right, slack, box, inside, missing=missing)
-            found.append(look.defect(area))
+            found.append(look.defect())
     return sorted(found, key=lambda d: (d.rows[0], d.x))
 
 
@@ -168,17 +168,17 @@ def _fill(mask: NDArray[Any], a: NDArray[np.float64], b: NDArray[np.float64]) ->
     cv2.fillPoly(mask, [np.rint(outline).astype(np.int32)], 255)
 
 
-def _components(mask: NDArray[Any], least_area: float) -> list[tuple[tuple[int, int, int, int], NDArray[Any], float]]:
-    """Return bounding box, mask and area of each connected part."""
+def _components(mask: NDArray[Any], least_area: float) -> list[tuple[tuple[int, int, int, int], NDArray[Any]]]:
+    """Return bounding box and mask of each connected part."""
     if not cv2.countNonZero(mask):
         return []
     x, y, w, h = cv2.boundingRect(mask)
     _, labels, stats, _ = cv2.connectedComponentsWithStats(np.ascontiguousarray(mask[y : y + h, x : x + w]), connectivity=8)
     found = []
     for k in np.nonzero(stats[1:, cv2.CC_STAT_AREA] >= least_area)[0] + 1:
-        bx, by, bw, bh, area = (int(v) for v in stats[k])
+        bx, by, bw, bh = (int(v) for v in stats[k, :4])
         part = labels[by : by + bh, bx : bx + bw] == k
-        found.append(((bx + x, by + y, bw, bh), part, float(area)))
+        found.append(((bx + x, by + y, bw, bh), part))
     return found
 
 
@@ -199,12 +199,15 @@ class _Look:
             centres = np.where(np.isfinite(left[:, middle]), (left[:, middle] + right[:, middle]) / 2, np.inf)
             self.line = int(np.argmin(np.abs(centres - at)))
             k = self.line
-            a, b = left[k, rows] - slack[k, 0] - 1, right[k, rows] + slack[k, 1] + 1
+            near, far = left[k, rows], right[k, rows]
+            a, b = near - slack[k, 0] - 1, far + slack[k, 1] + 1
         else:
             self.line = int(np.sum(left[:, middle] < at)) - 1
             k = self.line
-            a = right[k, rows] - slack[k, 1] - 1 if k >= 0 else np.full(h, -np.inf)
-            b = left[k + 1, rows] + slack[k + 1, 0] + 1 if k + 1 < len(left) else np.full(h, np.inf)
+            near = right[k, rows] if k >= 0 else np.full(h, -np.inf)
+            far = left[k + 1, rows] if k + 1 < len(left) else np.full(h, np.inf)
+            a = near - slack[k, 1] - 1 if k >= 0 else near
+            b = far + slack[k + 1, 0] + 1 if k + 1 < len(left) else far
         # What it joins is judged in its own rows only, so that nothing is joined around its ends.
         low = int(np.clip(np.nanmin(np.where(np.isfinite(a), a, x - 2)) - 1, 0, ink.shape[1] - 1))
         high = int(np.clip(np.nanmax(np.where(np.isfinite(b), b, x + w + 2)) + 2, low + 1, ink.shape[1]))
@@ -216,13 +219,13 @@ class _Look:
         place = np.arange(low, high)[None, :]
         self.left = bool((whole & (place <= a[:, None])).any())
         self.right = bool((whole & (place >= b[:, None])).any())
-        self.whole, self.low = whole & (place > a[:, None]) & (place < b[:, None]), low
+        self.whole, self.low = whole & (place > near[:, None]) & (place < far[:, None]), low
         # Columns counted from the course, so that a tilted line's defect is not cut askew.
         reference = a if np.isfinite(a).all() else b if np.isfinite(b).all() else np.full(h, float(x))
         offset = np.rint(columns - reference[counts]).astype(int)
         self.across = np.bincount(offset - offset.min())
 
-    def defect(self, area: float) -> Defect:
+    def defect(self) -> Defect:
         """Name it."""
         x, y, _, h = self.box
         both, one = self.left and self.right, self.left or self.right
@@ -239,5 +242,5 @@ class _Look:
         return Defect(
             kind=kind, line=self.line, left=self.left, right=self.right, rows=(y, y + h - 1),
             x=float(columns.mean() + shift), y=float(rows.mean() + y), extent=extent,
-            area=max(area, float(body.sum())), outline=contour[:, 0].astype(np.float64) + (shift, y),
+            area=float(body.sum()), outline=contour[:, 0].astype(np.float64) + (shift, y),
         )

@@ -48,6 +48,8 @@ class Trace:
         Median levels. [counts]
     bare_range : float
         Range of the bare level along and across the line. [counts]
+    middle_level : ndarray of float, shape (B,)
+        Middle between ink and bare in blocks along the line. [counts]
     noise : float
         sd of a pixel. [counts]
     overshoot : float
@@ -65,6 +67,7 @@ class Trace:
     ink: float
     bare: float
     bare_range: float
+    middle_level: NDArray[np.float64]
     noise: float
     overshoot: float
     shape_shift: NDArray[np.float64]
@@ -322,7 +325,8 @@ class _Tracer:
             way=((self.course[k] > 0) & (self.course[k] < self.width - 1)).all(axis=0),
             course=self.course[k], edges=edges, u_row=u_row, covariance=covariance, blur=blurs,
             ink=float(np.median(np.concatenate(ink))), bare=float(np.median(np.concatenate(bare))),
-            bare_range=float(np.ptp(np.concatenate(bare))), noise=float(np.mean(noise)),
+            bare_range=float(np.ptp(np.concatenate(bare))),
+            middle_level=(ink[0] + bare[0]) / 2, noise=float(np.mean(noise)),
             overshoot=float(np.mean(over)), shape_shift=shift,
         )
 

@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-from typing import Annotated, Literal
+from typing import Annotated, Any, Literal
 
-from pydantic import Field, FiniteFloat, model_validator
+from pydantic import Field, FiniteFloat, field_validator, model_validator
 
+from printmetrics.analysis.finding import MAX_TILT_DEG
 from printmetrics.measure.options import FeatureOptions, Positive
-
-MAX_TILT_DEG = 30.0
 
 
 class LinesOptions(FeatureOptions):
@@ -32,6 +31,26 @@ class LinesOptions(FeatureOptions):
         None, description="Local width is averaged over this length for width_min and width_max; "
         "default: 4 blur sigmas."
     )
+
+    @model_validator(mode="before")
+    @classmethod
+    def _count_is_a_limit(cls, data: Any) -> Any:
+        """An expected number of lines limits their count, unless the recipe limits it otherwise."""
+        if isinstance(data, dict):
+            centres = data.get("centres")
+            count = len(centres) if isinstance(centres, list | tuple) else data.get("count")
+            limits = data.get("limits", {})
+            if isinstance(count, int) and count > 0 and isinstance(limits, dict) and "line_count" not in limits:
+                data = {**data, "limits": {**limits, "line_count": {"lower": count, "upper": count}}}
+        return data
+
+    @field_validator("direction")
+    @classmethod
+    def _near_an_axis(cls, direction: str | float) -> str | float:
+        if not isinstance(direction, str) and MAX_TILT_DEG < abs((direction + 45) % 90 - 45):
+            msg = f"direction is {direction:g} degrees; lines are measured within {MAX_TILT_DEG:g} degrees of an axis"
+            raise ValueError(msg)
+        return direction
 
     @model_validator(mode="after")
     def _consistent(self) -> LinesOptions:

@@ -1,0 +1,151 @@
+"""From edge points in pixels to edges and widths along a line, normal to it, in lengths."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from scipy.interpolate import CubicSpline
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+_ON_GRID = 0.02  # samples this close to the grid, in steps, are taken as they are
+_NEAR = 0.8  # a grid point counts as measured when a sample lies within this many steps
+_PHASES = 8
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Straightened:
+    """Both edges of a line on one grid along it.
+
+    Parameters
+    ----------
+    s : ndarray of float, shape (n,)
+        Place along the line. [length]
+    left, right : ndarray of float, shape (n,)
+        Distance of either edge from the axis, along the line's normal; NaN where not measured. [length]
+    step : float
+        Grid interval. [length]
+    slope : float
+        Change of the across coordinate per unit along.
+    transfer : ndarray of float, shape (2, n // 2 + 1)
+        Amplitude with which the step onto the grid passes white noise on, at j / (n step), of either edge.
+    """
+
+    s: NDArray[np.float64]
+    left: NDArray[np.float64]
+    right: NDArray[np.float64]
+    step: float
+    slope: float
+    transfer: NDArray[np.float64]
+
+    @property
+    def width(self) -> NDArray[np.float64]:
+        """Local width. [length]"""
+        return self.right - self.left
+
+    @property
+    def width_transfer(self) -> NDArray[np.float64]:
+        """Amplitude with which noise is passed on into the local width."""
+        return np.asarray(np.sqrt((self.transfer**2).mean(axis=0)))
+
+
+def slope_of(points: NDArray[np.float64]) -> float:
+    """Return the slope of a line's course.
+
+    Parameters
+    ----------
+    points : ndarray of float, shape (2, M, 2)
+        Along and across coordinate of the left and the right edge points; NaN where not measured. [length]
+
+    Returns
+    -------
+    float
+        Least-squares slope of the middle between the edges.
+    """
+    middle = points.mean(axis=0)
+    middle = middle[np.isfinite(middle).all(axis=1)]
+    along = middle[:, 0] - middle[:, 0].mean()
+    return float(along @ middle[:, 1] / max(along @ along, 1e-30))
+
+
+def straighten(points: NDArray[np.float64], slope: float, pitch: float) -> Straightened:
+    """Turn edge points into edges along the line, paired along its normal.
+
+    Parameters
+    ----------
+    points : ndarray of float, shape (2, M, 2)
+        Along and across coordinate of the left and the right edge points; NaN where not measured. [length]
+    slope : float
+        Of the line's course; the normal follows from it.
+    pitch : float
+        Distance of two rows of points. [length]
+
+    Returns
+    -------
+    Straightened
+        On a grid of the rows' own interval along the line.
+    """
+    root = math.hypot(1.0, slope)
+    s = (points[..., 0] + slope * points[..., 1]) / root
+    t = (points[..., 1] - slope * points[..., 0]) / root
+    step = pitch * root
+    valid = np.isfinite(t)
+    start = max(float(s[k][valid[k]][0]) for k in (0, 1))
+    stop = min(float(s[k][valid[k]][-1]) for k in (0, 1))
+    grid = start + step * np.arange(max(int((stop - start) / step + 1e-6) + 1, 1))
+    edges, transfers = [], []
+    for k in (0, 1):
+        edge, transfer = _on_grid(s[k][valid[k]], t[k][valid[k]], grid, step)
+        edges.append(edge)
+        transfers.append(transfer)
+    return Straightened(
+        s=grid, left=edges[0], right=edges[1], step=step, slope=slope, transfer=np.array(transfers)
+    )
+
+
+def _on_grid(
+    s: NDArray[np.float64], t: NDArray[np.float64], grid: NDArray[np.float64], step: float
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Bring samples onto a grid by a cubic spline through them; keep gaps as gaps."""
+    order = np.argsort(s, kind="stable")
+    s, t = s[order], t[order]
+    nearest = np.clip(np.rint((s - grid[0]) / step).astype(np.intp), 0, len(grid) - 1)
+    offset = (s - grid[nearest]) / step
+    frequency = np.arange(len(grid) // 2 + 1) / len(grid)
+    result = np.full(len(grid), np.nan)
+    if np.abs(offset[(s >= grid[0] - step / 2) & (s <= grid[-1] + step / 2)]).max(initial=0.0) < _ON_GRID:
+        result[nearest] = t
+        return result, np.ones(len(frequency))
+    # Two samples almost at one place would make the spline swing: a steep edge has them.
+    apart = np.concatenate([[True], np.diff(s) > step / 4])
+    s, t = s[apart], t[apart]
+    place = np.searchsorted(s, grid)
+    near = np.minimum(
+        np.abs(grid - s[np.clip(place - 1, 0, len(s) - 1)]), np.abs(s[np.clip(place, 0, len(s) - 1)] - grid)
+    )
+    measured = near < _NEAR * step
+    if len(s) > 3:  # noqa: PLR2004  (a cubic needs four points)
+        result[measured] = CubicSpline(s, t)(grid[measured])
+    else:
+        result[measured] = np.interp(grid[measured], s, t)
+    phases = np.quantile(offset % 1.0, (np.arange(_PHASES) + 0.5) / _PHASES)
+    return result, np.sqrt(np.mean([_spline_gain(frequency, p) ** 2 for p in phases], axis=0))
+
+
+def _spline_gain(frequency: NDArray[np.float64], phase: float) -> NDArray[np.float64]:
+    """Return the amplitude response of cubic spline interpolation a fraction of a step off the samples."""
+    turn = 2j * math.pi * frequency
+    taps = {k: _cubic_b_spline(phase - k) for k in (-1, 0, 1, 2)}
+    above = sum(tap * np.exp(turn * k) for k, tap in taps.items())
+    return np.asarray(np.abs(above) / (2 / 3 + np.cos(2 * math.pi * frequency) / 3))
+
+
+def _cubic_b_spline(x: float) -> float:
+    x = abs(x)
+    if x < 1:
+        return 2 / 3 - x * x + x**3 / 2
+    return (2 - x) ** 3 / 6 if x < 2 else 0.0  # noqa: PLR2004  (the spline's support)

@@ -1,0 +1,504 @@
+"""One line: its figures, and the readings that follow from them."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from scipy.special import ndtri
+
+from printmetrics.analysis.roughness import Process, Roughness, amplitude_filter, fit_spectrum, u_mean, unbiased_sd
+from printmetrics.errors import FeatureError
+from printmetrics.flags import Flag
+from printmetrics.measure.lines.geometry import Straightened, slope_of, straighten
+from printmetrics.measure.readings import Reading, effective_dof
+from printmetrics.quantities import CATALOGUE
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from printmetrics.measure.lines.options import LinesOptions
+    from printmetrics.measure.lines.seeing import Seen
+    from printmetrics.measure.sight import Sight
+
+HARDCOPY_LEVEL = 0.4
+NECK_BLURS = 4.0  # default neck_length
+_LEVEL_SHARE = 0.1  # of a level's distance from mid-level that an edge unlike a Gaussian may shift it
+_SATURATED = 0.01
+_LOW_CONTRAST = 4.0
+_RESOLVED_BLURS = 2.6
+_RESOLVED_RAYLEIGH = 0.61
+_SPACE_BLURS = 3.5
+_SLOPE_BLUR = 0.235  # edge sigma of an aberration-free objective, in wavelength / NA
+_DEFOCUSED = 2.0
+_UNEVEN = 0.25
+_SHARPENED = 0.02
+_MISMATCH = 0.25
+_MATTERS = 0.04
+_GAPS = 0.2
+_STANDS_OUT = 5.0
+_SQRT3 = math.sqrt(3.0)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LineFigures:
+    """What readings of a line, and of its neighbours, are made from; lengths in the scale's unit.
+
+    Parameters
+    ----------
+    name : str
+        ``L3``.
+    straight : Straightened
+        Both edges along the line; rows hit by a defect are NaN.
+    whole : Straightened
+        The same with every row in which both edges were measured.
+    covariance : ndarray of float, shape (2, 2)
+        Of the mean edges, from pixel noise.
+    u_point : ndarray of float, shape (2,)
+        Of one edge point, from pixel noise.
+    blur : ndarray of float, shape (2,)
+        Gaussian sigma of either edge, across the line.
+    shape_shift : ndarray of float, shape (2,)
+        How far either edge's middle lies off the model's.
+    level_shift : float
+        By how much the width at the recipe's edge level exceeds that at mid-level.
+    width, left, right : Process or None
+        Fitted processes; None where the line is too short or perfectly straight.
+    flags : Flag
+        What is doubtful about the line as a whole.
+    """
+
+    name: str
+    straight: Straightened
+    whole: Straightened
+    covariance: NDArray[np.float64]
+    u_point: NDArray[np.float64]
+    blur: NDArray[np.float64]
+    shape_shift: NDArray[np.float64]
+    level_shift: float
+    width: Process | None
+    left: Process | None
+    right: Process | None
+    flags: Flag
+
+    @property
+    def length(self) -> float:
+        """Length measured."""
+        return float(np.isfinite(self.straight.width).sum()) * self.straight.step
+
+
+def level_shift(blur: NDArray[np.float64], level: float, *, bright: bool) -> float:
+    """Return by how much a line is wider at a level than at mid-level.
+
+    Parameters
+    ----------
+    blur : ndarray of float, shape (2,)
+        Gaussian sigma of either edge. [length]
+    level : float
+        Counted from dark (0) to bright (1).
+    bright : bool
+        Ink brighter than the web.
+
+    Returns
+    -------
+    float
+        Positive where wider. [length]
+
+    Notes
+    -----
+    The level p of a Gaussian edge lies sigma * Phi^-1(p) from its middle, towards the bright side.
+
+    Examples
+    --------
+    A dark line at the 40 % level reads 0.50669 sigma narrow.
+
+    >>> round(level_shift(np.array([1.0, 1.0]), 0.4, bright=False), 5)
+    -0.50669
+    """
+    shift = float(ndtri(level)) * float(blur.sum())
+    return -shift if bright else shift
+
+
+def line_figures(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFigures:
+    """Bring one traced line into lengths, and fit its roughness.
+
+    Parameters
+    ----------
+    seen : Seen
+        All lines.
+    k : int
+        Index of the line.
+    sight : Sight
+        For the scale and the optics.
+    options : LinesOptions
+        For the edge level.
+
+    Returns
+    -------
+    LineFigures
+        Figures of the line.
+    """
+    trace, scale = seen.traces[k], sight.scale
+    along, across = (scale.y, scale.x) if seen.direction.vertical else (scale.x, scale.y)
+    rows = np.arange(trace.edges.shape[1], dtype=np.float64) + seen.origin[1 if seen.direction.vertical else 0]
+    start = seen.origin[0 if seen.direction.vertical else 1]
+    points = np.stack([np.column_stack([rows * along, (edge + start) * across]) for edge in trace.edges])
+    points[:, ~np.isfinite(trace.edges).all(axis=0)] = np.nan
+    clean = points.copy()
+    if np.isfinite(points[:, ~seen.hit[k], 1]).sum() > np.isfinite(points[..., 1]).sum() / 4:
+        clean[:, seen.hit[k]] = np.nan
+    slope = slope_of(clean)
+    straight = straighten(clean, slope, along)
+    normal = across / math.hypot(1.0, slope)  # length across the line per pixel along the row
+    blur = trace.blur * normal
+    u_point = trace.u_row * normal
+    around = float(blur.mean()) * along / across  # the same optics blur the edge along the line
+    series = {
+        "width": (straight.width, 2, straight.width_transfer, False),
+        "left": (straight.left, 1, straight.transfer[0], True),
+        "right": (straight.right, 1, straight.transfer[1], True),
+    }
+    fits: dict[str, Process | None] = {}
+    for name, (values, points_each, transfer, line_removed) in series.items():
+        noise = float(np.sqrt((u_point**2).mean())) if name == "width" else float(u_point[int(name == "right")])
+        fits[name] = _fit(values, straight.step, around, noise, points_each, transfer, line_removed=line_removed)
+    return LineFigures(
+        name=seen.names[k],
+        straight=straight,
+        whole=straight if clean is points else straighten(points, slope, along),
+        covariance=trace.covariance * normal**2,
+        u_point=u_point,
+        blur=blur,
+        shape_shift=trace.shape_shift * normal,
+        level_shift=level_shift(blur, options.edge_level, bright=options.ink == "bright"),
+        flags=_flags(seen, k, sight, blur, options),
+        **fits,
+    )
+
+
+def _fit(
+    values: NDArray[np.float64], step: float, blur: float, noise: float, points: int, transfer: NDArray[np.float64],
+    *, line_removed: bool,
+) -> Process | None:
+    """Fit the process of one series; None where it is too short or has no scatter at all."""
+    known = np.isfinite(values)
+    if not known.any():
+        return None
+    first, last = np.nonzero(known)[0][[0, -1]]
+    part = values[first : last + 1]
+    if line_removed:
+        place = np.arange(len(part), dtype=np.float64)
+        good = np.isfinite(part)
+        part = part - np.polyval(np.polyfit(place[good], part[good], 1), place)
+    try:
+        return fit_spectrum(
+            part, step, blur=blur, noise_expected=max(noise, 1e-12), noise_multiplicity=points,
+            noise_transfer=transfer, line_removed=line_removed,
+        )
+    except FeatureError:
+        return None
+
+
+def _flags(seen: Seen, k: int, sight: Sight, blur: NDArray[np.float64], options: LinesOptions) -> Flag:
+    """Judge a line as a whole; each criterion stands in the documentation of the flags."""
+    trace, flags = seen.traces[k], Flag.NONE
+    contrast = trace.contrast
+    if contrast < _LOW_CONTRAST * trace.noise:
+        flags |= Flag.LOW_CONTRAST
+    if trace.bare_range > _UNEVEN * contrast:
+        flags |= Flag.UNEVEN_LIGHT
+    if trace.overshoot > _SHARPENED:
+        flags |= Flag.SHARPENED
+    if not trace.way.all():
+        flags |= Flag.CUT_BY_BORDER
+    sigma = float(trace.blur.max())
+    width = trace.width
+    if width < _RESOLVED_BLURS * sigma:
+        flags |= Flag.NOT_RESOLVED
+    for j in (k - 1, k + 1):
+        if 0 <= j < len(seen.traces):
+            low, high = sorted((k, j))
+            space = float(np.nanmedian(seen.traces[high].course[0] - seen.traces[low].course[1]))
+            if space < _SPACE_BLURS * sigma:
+                flags |= Flag.LEVELS_UNRESOLVED
+    if sight.na is not None and sight.wavelength_um is not None and sight.scale.unit == "um":
+        optical = sight.wavelength_um / sight.na
+        per_px = sight.scale.mean
+        if width * per_px / math.hypot(1.0, seen.direction.slope) < _RESOLVED_RAYLEIGH * optical:
+            flags |= Flag.NOT_RESOLVED
+        if float(blur.max()) > _DEFOCUSED * math.hypot(_SLOPE_BLUR * optical, per_px / math.sqrt(12)):
+            flags |= Flag.DEFOCUSED
+    if seen.saturated is not None and _saturated_share(seen, k) > _SATURATED:
+        flags |= Flag.SATURATED
+    if seen.expected is not None:
+        extra = int(seen.names[k][1:]) > seen.expected
+        if extra or (options.centres is None and seen.count != seen.expected):
+            flags |= Flag.COUNT_DIFFERS
+    return flags
+
+
+def _saturated_share(seen: Seen, k: int) -> float:
+    """Share of saturated pixels within 4 blurs of the line's edges."""
+    assert seen.saturated is not None
+    trace = seen.traces[k]
+    reach = math.ceil(4 * float(trace.blur.max()))
+    rows = np.nonzero(np.isfinite(trace.edges).all(axis=0))[0]
+    shares = []
+    for edge in trace.edges[:, rows]:
+        columns = np.rint(edge).astype(int)[:, None] + np.arange(-reach, reach + 1)
+        shares.append(seen.saturated[rows[:, None], np.clip(columns, 0, seen.saturated.shape[1] - 1)].mean())
+    return float(max(shares))
+
+
+def line_readings(line: LineFigures, seen: Seen, sight: Sight, options: LinesOptions) -> list[Reading]:
+    """Return every reading of one line.
+
+    Parameters
+    ----------
+    line : LineFigures
+        The line.
+    seen : Seen
+        For its defects.
+    sight : Sight
+        For the scale.
+    options : LinesOptions
+        For edge level and neck length.
+
+    Returns
+    -------
+    list of Reading
+        One for each quantity of a single line; withheld ones have no value.
+    """
+    return _LineReadings(line, seen, sight, options).all()
+
+
+class _LineReadings:
+    def __init__(self, line: LineFigures, seen: Seen, sight: Sight, options: LinesOptions) -> None:
+        self.line, self.seen, self.scale, self.options = line, seen, sight.scale, options
+        self.width = line.straight.width
+        self.mid_mean = float(np.nanmean(self.width))
+        self.mean = self.mid_mean + line.level_shift
+        self.readings: list[Reading] = []
+        self.rough_flags = self._rough_flags()
+        names = [d for d in seen.defects if d.kind in ("open", "neck", "void")]
+        own = [d for d in names if seen.names[d.line] == line.name]
+        self.opens = sum(d.kind == "open" for d in own)
+
+    def add(
+        self, quantity: str, value: float | None, *, noise: float | None = None, sampling: float | None = None,
+        model: float = 0.0, dof: float = math.inf, flags: Flag = Flag.NONE, scaled: bool = True,
+    ) -> None:
+        """Add a reading; the scale's share of the uncertainty is joined to the model's."""
+        common = None
+        if value is not None and noise is not None:
+            common = math.hypot(model, abs(value) * self.scale.u_relative if scaled else 0.0)
+        self.readings.append(
+            Reading(
+                item=self.line.name, quantity=quantity, value=value,
+                unit=CATALOGUE["lines"][quantity].unit(self.scale.unit),
+                u_noise=noise, u_sampling=sampling, u_common=common, dof=dof, flags=self.line.flags | flags,
+                eval_length=self.line.length, sampling=self.line.straight.step,
+            )
+        )
+
+    def _rough_flags(self) -> Flag:
+        """Doubts about roughness: length, gaps, and noise that isn't what the pixels' noise predicts."""
+        process, flags = self.line.width, Flag.NONE
+        if process is None or process.short:
+            flags |= Flag.SHORT_SAMPLING
+        if process is not None:
+            predicted = float(np.sqrt((self.line.u_point**2).mean()))
+            off = 2.0 * abs(process.noise**2 - predicted**2)
+            if abs(math.log(process.noise / max(predicted, 1e-12))) > _MISMATCH and off > _MATTERS * process.sigma**2:
+                flags |= Flag.OUTSIDE_VALIDITY
+        missing = 1.0 - float(np.isfinite(self.width).mean())
+        return flags | (Flag.OUTSIDE_VALIDITY if missing > _GAPS else Flag.NONE)
+
+    def all(self) -> list[Reading]:
+        """Make all readings."""
+        self._widths()
+        self._extremes()
+        self._roughness()
+        self._process()
+        line = self.line
+        blur = float(line.blur.mean())
+        self.add("edge_blur", blur, noise=float(np.abs(np.diff(line.blur))[0]) / 2 + 0.02 * blur)
+        self._tilt()
+        self.add("length", line.length, noise=line.straight.step / math.sqrt(6.0))
+        self.add("open_count", float(self.opens))
+        return self.readings
+
+    def _sampling(self) -> tuple[float | None, float, Flag]:
+        """Uncertainty of the mean width as that of the process, its degrees of freedom, and doubts."""
+        if self.line.width is not None:
+            return *u_mean(self.line.width, self.line.length), Flag.NONE
+        if float(np.nanstd(self.width)) == 0.0:
+            return 0.0, math.inf, Flag.NONE
+        return None, math.inf, Flag.SHORT_SAMPLING | Flag.OUTSIDE_VALIDITY
+
+    def _widths(self) -> None:
+        line = self.line
+        noise = math.sqrt(max(float(line.covariance[0, 0] + line.covariance[1, 1] - 2 * line.covariance[0, 1]), 0.0))
+        sampling, sampling_dof, doubt = self._sampling()
+        shape = abs(float(line.shape_shift[1] - line.shape_shift[0])) / _SQRT3
+        bright = self.options.ink == "bright"
+        hardcopy = level_shift(line.blur, HARDCOPY_LEVEL, bright=bright)
+        for quantity, shift in (("width_mean", line.level_shift), ("width_r40", hardcopy)):
+            value = self.mid_mean + shift
+            model = math.hypot(shape, _LEVEL_SHARE * shift)
+            common = math.hypot(model, value * self.scale.u_relative)
+            dof = effective_dof([(noise, math.inf), (sampling or 0.0, sampling_dof), (common, math.inf)])
+            self.add(quantity, value, noise=noise, sampling=sampling, model=model, dof=dof, flags=doubt)
+
+    def _extremes(self) -> None:
+        """Extremes and the harmonic mean, freed of the noise's share; what stands out of the noise is kept as seen."""
+        line, step = self.line, self.line.straight.step
+        neck = self.options.neck_length or NECK_BLURS * float(line.blur.mean())
+        whole = line.whole.width + line.level_shift
+        count = max(1, round(neck / step))
+        raw = running_mean(whole, count)
+        flags = self.rough_flags & ~Flag.SHORT_SAMPLING
+        base = self.width + line.level_shift
+        shape = abs(float(line.shape_shift[1] - line.shape_shift[0])) / _SQRT3
+        if line.width is not None:
+            averaged, u_local = amplitude_filter(base, line.width, average_over=neck, noise_transfer=line.straight.width_transfer)
+            true, _ = amplitude_filter(base, line.width, noise_transfer=line.straight.width_transfer)
+            u_raw = math.sqrt(2.0) * line.width.noise / math.sqrt(count)
+        else:
+            averaged, true, u_local, u_raw = raw, base, 0.0, 0.0
+        low, high = float(np.nanmin(averaged)), float(np.nanmax(averaged))
+        raw_low, raw_high = float(np.nanmin(raw)), float(np.nanmax(raw))
+        for name, value, seen, sign in (("width_min", low, raw_low, -1), ("width_max", high, raw_high, 1)):
+            stands_out = sign * (seen - value) > _STANDS_OUT * u_raw
+            self.add(
+                name, 0.0 if name == "width_min" and self.opens else seen if stands_out else value,
+                noise=u_raw if stands_out else u_local, model=shape, flags=flags,
+            )
+        hit = np.isfinite(line.whole.width) & ~_covered(line.whole.s, line.straight)
+        local = np.concatenate([true[np.isfinite(true)], whole[hit]])
+        sampling, sampling_dof, doubt = self._sampling()
+        mean_noise = next(r.u_noise for r in self.readings if r.quantity == "width_mean") or 0.0
+        if self.opens:
+            self.add("width_harmonic", 0.0, noise=mean_noise, flags=doubt)
+        elif local.min() <= 0:
+            self.add("width_harmonic", None, flags=flags | Flag.OUTSIDE_VALIDITY)
+        else:
+            value = 1.0 / float(np.mean(1.0 / local))
+            u_spread = 0.0
+            if line.width is not None:
+                rough = unbiased_sd(self.width, line.width)
+                u_spread = 2.0 * rough.sd * rough.u_noise / self.mean
+            noise = math.hypot(mean_noise, u_spread)
+            dof = effective_dof([(noise, math.inf), (sampling or 0.0, sampling_dof)])
+            self.add("width_harmonic", value, noise=noise, sampling=sampling, model=shape, dof=dof, flags=flags | doubt)
+
+    def _roughness(self) -> None:
+        line, straight = self.line, self.line.straight
+        for prefix, raw_name, values, process in (
+            ("lwr_3sigma", "lwr_3sigma_raw", straight.width, line.width),
+            ("ler_left_3sigma", "ler_left_3sigma_raw", straight.left, line.left),
+            ("ler_right_3sigma", "ler_right_3sigma_raw", straight.right, line.right),
+        ):
+            raw = _sd(values, line_removed=prefix != "lwr_3sigma")
+            if process is None:
+                self.add(prefix, None, flags=self.rough_flags | Flag.SHORT_SAMPLING)
+                self.add(raw_name, 3 * raw, flags=self.rough_flags)
+                continue
+            rough: Roughness = unbiased_sd(values, process)
+            dof = rough.sd**2 / (2.0 * rough.u_sampling**2) * 1.0 if rough.u_sampling > 0 else math.inf
+            self.add(
+                prefix, 3 * rough.sd, noise=3 * rough.u_noise, sampling=3 * rough.u_sampling,
+                dof=max(dof, 1.0), flags=self.rough_flags,
+            )
+            self.add(
+                raw_name, 3 * raw, noise=3 * rough.u_noise * rough.sd / max(raw, 1e-30),
+                sampling=3 * rough.u_sampling * rough.sd / max(raw, 1e-30), dof=max(dof, 1.0), flags=self.rough_flags,
+            )
+        for name, values, process in (
+            ("raggedness_left", straight.left, line.left), ("raggedness_right", straight.right, line.right)
+        ):
+            raw = _sd(values, line_removed=True)
+            if process is None:
+                self.add(name, raw, flags=self.rough_flags)
+                continue
+            rough = unbiased_sd(values, process)
+            share = rough.sd / max(raw, 1e-30)
+            self.add(name, raw, noise=rough.u_noise * share, sampling=rough.u_sampling * share, flags=self.rough_flags)
+
+    def _process(self) -> None:
+        """Figures of the fitted process; withheld where the line is too short, or too smooth, to tell them."""
+        process = self.line.width
+        names = ("lwr_3sigma_long", "correlation_length", "roughness_exponent", "edge_noise")
+        if process is None or process.short:
+            for name in names:
+                self.add(name, None, flags=self.rough_flags | Flag.SHORT_SAMPLING)
+            return
+        flags = self.rough_flags
+        self.add("lwr_3sigma_long", 3 * process.sigma, noise=0.0, sampling=3 * process.u_sigma, flags=flags)
+        if process.resolved:
+            self.add("correlation_length", process.xi, noise=0.0, sampling=process.u_xi, flags=flags)
+            self.add("roughness_exponent", process.hurst, noise=0.0, sampling=process.u_hurst, flags=flags, scaled=False)
+        else:
+            for name in names[1:3]:
+                self.add(name, None, flags=flags | Flag.LOW_CONTRAST)
+        self.add("edge_noise", process.noise, noise=process.u_noise, flags=flags)
+
+    def _tilt(self) -> None:
+        line, straight = self.line, self.line.straight
+        vertical = self.seen.direction.vertical
+        tilt = -math.degrees(math.atan(straight.slope)) if vertical else math.degrees(math.atan(straight.slope))
+        n, length = max(int(np.isfinite(straight.width).sum()), 2), max(line.length, straight.step)
+        lever = math.sqrt(12.0) / length
+        noise = math.degrees(lever * math.sqrt(float((line.u_point**2).sum()) / 4 / n))
+        sampling = math.degrees(lever * math.sqrt(centre_variance(line))) if line.left and line.right else None
+        self.add("tilt", tilt, noise=noise, sampling=sampling, scaled=False)
+
+
+def centre_variance(line: LineFigures) -> float:
+    """Return the variance of the mean position of a line's middle that its wander along the way brings.
+
+    Parameters
+    ----------
+    line : LineFigures
+        The line, with its processes fitted.
+
+    Returns
+    -------
+    float
+        Variance. [length^2]
+
+    Notes
+    -----
+    S_middle = (S_left + S_right) / 2 - S_width / 4, at frequency zero: derived from S_width = S_left + S_right - 2 S_LR.
+    """
+    left, right, width = (u_mean(p, line.length)[0] ** 2 if p else 0.0 for p in (line.left, line.right, line.width))
+    return max((left + right) / 2 - width / 4, (left + right) / 8)
+
+
+def _sd(values: NDArray[np.float64], *, line_removed: bool) -> float:
+    good = np.isfinite(values)
+    y = values[good]
+    if len(y) < 3:  # noqa: PLR2004  (two points lie on a line)
+        return 0.0
+    x = np.nonzero(good)[0].astype(np.float64)
+    if line_removed:
+        y = y - np.polyval(np.polyfit(x, y, 1), x)
+    return float(y.std(ddof=2 if line_removed else 1))
+
+
+def running_mean(values: NDArray[np.float64], count: int) -> NDArray[np.float64]:
+    """Mean over `count` neighbours, where at least half of them are known."""
+    good = np.isfinite(values)
+    total = np.convolve(np.where(good, values, 0.0), np.ones(count), mode="same")
+    known = np.convolve(good.astype(float), np.ones(count), mode="same")
+    full = known >= (count / 2 if count < len(values) else 1)
+    return np.where(full & good, total / np.maximum(known, 1), np.nan)
+
+
+def _covered(s: NDArray[np.float64], straight: Straightened) -> NDArray[np.bool_]:
+    """Tell which places are measured in the line without its defects."""
+    at = np.rint((s - straight.s[0]) / straight.step).astype(int)
+    inside = (at >= 0) & (at < len(straight.s))
+    return inside & np.isfinite(straight.width[np.clip(at, 0, len(straight.s) - 1)])

@@ -1,0 +1,125 @@
+"""Measure printed lines: from what was seen to readings with uncertainty."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from printmetrics.measure.lines.line import LineFigures, line_figures, line_readings
+from printmetrics.measure.lines.neighbours import neighbour_readings
+from printmetrics.measure.lines.seeing import Seen, see_lines
+from printmetrics.measure.readings import Event, Measured, Reading, Shape
+from printmetrics.quantities import CATALOGUE
+
+if TYPE_CHECKING:
+    from printmetrics.analysis.defects import Defect
+    from printmetrics.measure.lines.options import LinesOptions
+    from printmetrics.measure.sight import Sight
+
+_PAIR = ("pitch", "space_mean", "space_min", "bridge_count")
+_ALL = ("line_count",)
+
+
+def expected_items(options: LinesOptions) -> dict[str, tuple[str, ...]]:
+    """Return the items which the recipe promises, with the quantities each has.
+
+    Parameters
+    ----------
+    options : LinesOptions
+        What the recipe says.
+
+    Returns
+    -------
+    dict of str to tuple of str
+        Quantities by item; all under ``all`` where neither count nor centres are given.
+    """
+    known = tuple(CATALOGUE["lines"])
+    count = options.count if options.centres is None else len(options.centres)
+    if count is None:
+        return {"all": known}
+    single = tuple(name for name in known if name not in _PAIR + _ALL)
+    items = {f"L{k}": single for k in range(1, count + 1)}
+    items |= {f"L{k}..L{k + 1}": _PAIR for k in range(1, count)}
+    return items | {"all": _ALL}
+
+
+def measure_lines(sight: Sight, options: LinesOptions) -> Measured:
+    """Measure all lines of a region: width, roughness, spaces, defects.
+
+    Parameters
+    ----------
+    sight : Sight
+        One picture in linear light, with its scale.
+    options : LinesOptions
+        Region, ink, direction, expected lines, edge level.
+
+    Returns
+    -------
+    Measured
+        Readings per line and per pair of neighbours, events, and the edges to draw.
+
+    Raises
+    ------
+    FeatureError
+        When there is nothing to measure; it says how many lines were found.
+
+    Notes
+    -----
+    Definitions and sources stand in `printmetrics.quantities`. Edges are paired along each line's normal. What a
+    reading's uncertainty holds: `u_noise` pixel noise, levels and blur; `u_sampling` the sampling of a rough line,
+    from the fitted process at zero frequency; `u_common` the scale and how far the edge's shape is from the model.
+    """
+    seen = see_lines(sight, options)
+    result = Measured()
+    figures = [line_figures(seen, k, sight, options) for k in range(len(seen.traces))]
+    for k, line in enumerate(figures):
+        result.readings.extend(line_readings(line, seen, sight, options))
+        result.shapes.extend(_edge_shapes(seen, k))
+    names = {name: k for k, name in enumerate(seen.names)}
+    for name, k in names.items():
+        follower = names.get(f"L{int(name[1:]) + 1}")
+        if follower is not None:
+            result.readings.extend(neighbour_readings(figures[k], figures[follower], seen, sight, options))
+    result.readings.append(Reading(item="all", quantity="line_count", value=float(seen.count), unit="1"))
+    for defect in seen.defects:
+        event = _event(defect, seen, figures, sight)
+        result.events.append(event)
+        outline = seen.to_picture(defect.outline[:, 1], defect.outline[:, 0])
+        result.shapes.append(Shape(item=event.item, role=f"event:{event.event}", points_px=outline))
+    return result
+
+
+def _edge_shapes(seen: Seen, k: int) -> list[Shape]:
+    """Edges as measured, and where they were left out."""
+    trace = seen.traces[k]
+    rows = np.arange(trace.edges.shape[1], dtype=np.float64)
+    used = np.isfinite(trace.edges).all(axis=0) & ~seen.hit[k]
+    shapes = []
+    for side in (0, 1):
+        for role, where, edge in (
+            ("edge", used, trace.edges[side]),
+            ("left_out", ~used & trace.way, np.where(np.isfinite(trace.edges[side]), trace.edges[side], trace.course[side])),
+        ):
+            if where.any():
+                points = seen.to_picture(rows, np.where(where, edge, np.nan))
+                shapes.append(Shape(item=seen.names[k], role=role, points_px=points))
+    return shapes
+
+
+def _event(defect: Defect, seen: Seen, figures: list[LineFigures], sight: Sight) -> Event:
+    """Turn a defect into an event with lengths."""
+    single = defect.kind in ("open", "neck", "void")
+    inner = [j for j in (defect.line, defect.line + 1) if 0 <= j < len(seen.names)]
+    if not single and defect.kind == "bulge":
+        inner = [defect.line if defect.left else defect.line + 1]
+    items = [seen.names[defect.line]] if single else [seen.names[j] for j in inner]
+    x, y = seen.to_picture(np.array([defect.y]), np.array([defect.x]))[0]
+    line = figures[defect.line if single else inner[0]]
+    along = sight.scale.y if seen.direction.vertical else sight.scale.x
+    return Event(
+        item="..".join(items), event=defect.kind, x_px=float(x), y_px=float(y),
+        size=defect.extent * along * math.hypot(1.0, line.straight.slope),
+        area=defect.area * sight.scale.x * sight.scale.y,
+    )

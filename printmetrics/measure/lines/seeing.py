@@ -1,0 +1,311 @@
+"""From a picture to traced lines: region, direction, names, traces and defects, in pixels."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import cv2
+import numpy as np
+
+from printmetrics.analysis.defects import Defect, find_defects, ink_mask, smoothing
+from printmetrics.analysis.edges import window_half
+from printmetrics.analysis.finding import MAX_TILT_DEG, SMOOTH_PX, CoarseLine, Direction, find_direction, find_lines
+from printmetrics.analysis.tracing import Trace, trace_lines
+from printmetrics.errors import FeatureError
+from printmetrics.flags import Flag
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from printmetrics.measure.lines.options import LinesOptions
+    from printmetrics.measure.sight import Sight
+
+_SMALLEST_PX = 16
+_RIVAL = 0.7  # edges along the other axis this strong leave the direction open
+_SLACK_SD = 4.5  # an edge this many sd off its course is a defect's, not rough
+_UNEVEN = 0.1  # a bare level that varies by this part of the contrast takes a threshold that follows it
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Seen:
+    """What was seen of a set of lines.
+
+    Parameters
+    ----------
+    direction : Direction
+        Axis and slope.
+    origin : tuple of int
+        Column and row of the region in the picture. [px]
+    image : ndarray, shape (M, N)
+        The region, turned so that the lines run along its columns. [counts]
+    names : list of str
+        Name of each line, in order of place.
+    traces : list of Trace
+        The lines.
+    defects : list of Defect
+        In the turned region's pixels.
+    hit : ndarray of bool, shape (K, M)
+        Rows of each line in which an edge is a defect's.
+    count : int
+        Lines found.
+    expected : int or None
+        Lines promised by the recipe.
+    """
+
+    direction: Direction
+    origin: tuple[int, int]
+    image: NDArray[Any]
+    saturated: NDArray[np.bool_] | None
+    names: list[str]
+    traces: list[Trace]
+    defects: list[Defect]
+    hit: NDArray[np.bool_]
+    ink: NDArray[Any]
+    count: int
+    expected: int | None
+
+    def to_picture(self, along: NDArray[np.float64], across: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Turn rows and columns of the region into x and y of the picture, shape (n, 2). [px]"""
+        x, y = (across, along) if self.direction.vertical else (along, across)
+        return np.column_stack([x + self.origin[0], y + self.origin[1]])
+
+
+def see_lines(sight: Sight, options: LinesOptions) -> Seen:
+    """Find and trace the lines of a region.
+
+    Parameters
+    ----------
+    sight : Sight
+        The picture.
+    options : LinesOptions
+        What the recipe says.
+
+    Returns
+    -------
+    Seen
+        Lines from left to right, or top to bottom.
+
+    Raises
+    ------
+    FeatureError
+        When there is nothing to measure: region too small or flat, direction ambiguous, no line found.
+    """
+    origin, part = _region(sight, options)
+    saturated = None
+    if sight.saturated is not None:
+        rows = slice(origin[1], origin[1] + part.shape[0])
+        saturated = sight.saturated[rows, origin[0] : origin[0] + part.shape[1]]
+    direction, image, found = _find(part, options)
+    if saturated is not None and not direction.vertical:
+        saturated = saturated.T
+    traced = [(line, trace) for line, trace in zip(found, trace_lines(image, found), strict=True) if trace is not None]
+    expected = options.count if options.centres is None else len(options.centres)
+    if not traced:
+        raise _nothing(part, options, "no line was found")
+    traces = [trace for _, trace in traced]
+    names = _names(traces, direction, origin, sight, options)
+    ink, slack = _ink(image, traces, bright=options.ink == "bright")
+    defects, hit = _defects(ink, slack, traces, [line for line, _ in traced])
+    return Seen(
+        direction=direction, origin=origin, image=image, saturated=saturated, names=names, traces=traces,
+        defects=defects, hit=hit, ink=ink, count=len(traces), expected=expected,
+    )
+
+
+def _region(sight: Sight, options: LinesOptions) -> tuple[tuple[int, int], NDArray[Any]]:
+    """Cut the region out of the picture: pixels whose centres lie in it."""
+    height, width = sight.image.shape
+    x0, y0, x1, y1 = 0, 0, width, height
+    if options.region is not None:
+        x, y, w, h = options.region
+        (left, top), (right, bottom) = sight.scale.to_px([[x, y], [x + w, y + h]])
+        x0, y0, x1, y1 = (math.ceil(v - 1e-9) for v in (left, top, right, bottom))
+        x0, y0, x1, y1 = max(x0, 0), max(y0, 0), min(x1, width), min(y1, height)
+    part = sight.image[y0:y1, x0:x1]
+    if min(part.shape, default=0) < _SMALLEST_PX:
+        msg = (
+            f"the region is {x1 - x0} x {y1 - y0} px; lines need at least {_SMALLEST_PX} x {_SMALLEST_PX} px: "
+            "check the region against the picture's size and scale"
+        )
+        raise FeatureError(msg, Flag.OUTSIDE_VALIDITY)
+    return (x0, y0), part
+
+
+def _find(part: NDArray[Any], options: LinesOptions) -> tuple[Direction, NDArray[Any], list[CoarseLine]]:
+    """Find direction and lines; where nothing is found, look again more softly."""
+    low, high, _, _ = cv2.minMaxLoc(part)
+    if low == high:
+        raise _nothing(part, options, f"every pixel of the region has the value {low:g}")
+    given = _given_direction(options)
+    for smooth in SMOOTH_PX:
+        vertical = given.vertical if given is not None else None
+        direction = find_direction(part, vertical=vertical, smooth=smooth)
+        if given is not None and given.slope is not None:
+            direction = Direction(given.vertical, given.slope, 0.0)
+        elif given is None and direction.rival > _RIVAL:
+            continue
+        image = part if direction.vertical else np.ascontiguousarray(part.T)
+        lines = find_lines(image, direction.slope, bright=options.ink == "bright", smooth=smooth)
+        if lines:
+            return direction, image, lines
+    if given is None and direction.rival > _RIVAL:
+        msg = (
+            "edges run along both axes alike, so the lines' direction is open; "
+            'set direction = "vertical" or "horizontal" for this feature, or a region that holds one direction only'
+        )
+        raise _nothing(part, options, msg)
+    raise _nothing(part, options, "no line was found")
+
+
+@dataclass(frozen=True, slots=True)
+class _Given:
+    vertical: bool
+    slope: float | None
+
+
+def _given_direction(options: LinesOptions) -> _Given | None:
+    if options.direction == "auto":
+        return None
+    if isinstance(options.direction, str):
+        return _Given(options.direction == "vertical", None)
+    angle = (options.direction + 45.0) % 180.0 - 45.0
+    if abs(angle) <= MAX_TILT_DEG:
+        return _Given(vertical=False, slope=math.tan(math.radians(angle)))
+    return _Given(vertical=True, slope=-math.tan(math.radians(angle - 90.0)))
+
+
+def _nothing(part: NDArray[Any], options: LinesOptions, why: str) -> FeatureError:
+    """Say what was looked for, and that it isn't there."""
+    if why != "no line was found":
+        return FeatureError(f"no line can be measured: {why}", Flag.LEVELS_UNRESOLVED, count=0)
+    msg = (
+        f"no line was found in the region of {part.shape[1]} x {part.shape[0]} px: nothing {options.ink} on its "
+        "surroundings runs through it within 30 degrees of an axis; check that the web is printed, that the region "
+        "is where the lines are, and that ink says rightly bright or dark"
+    )
+    return FeatureError(msg, Flag.COUNT_DIFFERS, count=0)
+
+
+def _names(
+    traces: list[Trace], direction: Direction, origin: tuple[int, int], sight: Sight, options: LinesOptions
+) -> list[str]:
+    """Name the lines in order, or after the nearest designed centre."""
+    if options.centres is None:
+        return [f"L{k + 1}" for k in range(len(traces))]
+    scale, start = (sight.scale.x, origin[0]) if direction.vertical else (sight.scale.y, origin[1])
+    middle = traces[0].course.shape[1] // 2
+    place = np.array([trace.course[:, middle].mean() + start for trace in traces]) * scale
+    centres = np.array(options.centres)
+    reach = float(np.diff(centres).min()) / 2 if len(centres) > 1 else np.inf
+    off = np.abs(place[:, None] - centres)
+    names = [""] * len(traces)
+    for k, j in sorted(np.ndindex(off.shape), key=lambda kj: off[kj]):
+        if off[k, j] < reach and not names[k] and f"L{j + 1}" not in names:
+            names[k] = f"L{j + 1}"
+    extra = len(centres)
+    for k, name in enumerate(names):
+        if not name:
+            extra += 1
+            names[k] = f"L{extra}"
+    return names
+
+
+def _ink(image: NDArray[Any], traces: list[Trace], *, bright: bool) -> tuple[NDArray[Any], NDArray[np.float64]]:
+    """Return where ink is seen, and how far rough edges may stray from their course."""
+    contrast = float(np.median([t.contrast for t in traces]))
+    smooth = smoothing(contrast, float(np.median([t.noise for t in traces])))
+    levels = [(t.ink + t.bare) / 2 for t in traces]
+    uneven = max(t.bare_range for t in traces) > _UNEVEN * contrast or np.ptp(levels) > _UNEVEN * contrast
+    threshold: float | NDArray[np.float32] = float(np.median(levels))
+    if uneven:
+        threshold = _threshold_map(image.shape, traces)
+    slack = np.empty((len(traces), 2))
+    for k, trace in enumerate(traces):
+        for side in (0, 1):
+            off = trace.edges[side] - _smooth_course(trace, side)
+            sd = 1.4826 * float(np.nanmedian(np.abs(off)))
+            slack[k, side] = max(2.0, 1.5 * float(trace.blur[side]), _SLACK_SD * sd)
+        slack[k] = np.minimum(slack[k], trace.width / 3)
+    for k in range(len(traces) - 1):
+        space = float(np.nanmedian(traces[k + 1].course[0] - traces[k].course[1]))
+        slack[k, 1], slack[k + 1, 0] = min(slack[k, 1], space / 3), min(slack[k + 1, 0], space / 3)
+    return ink_mask(image, threshold, smooth, bright=bright), slack
+
+
+def _threshold_map(shape: tuple[int, ...], traces: list[Trace]) -> NDArray[np.float32]:
+    """Middle level over the picture, from the levels of each line along its way, as a small picture."""
+    rows = np.linspace(0, shape[0] - 1, 33)
+    columns = np.linspace(0, shape[1] - 1, 65)
+    place, level = [], []
+    for trace in traces:
+        middle = trace.course.mean(axis=0)
+        place.append(np.interp(rows, np.arange(shape[0]), middle))
+        blocks = len(trace.middle_level)
+        level.append(np.interp(rows, (np.arange(blocks) + 0.5) * shape[0] / blocks, trace.middle_level))
+    at, value = np.array(place), np.array(level)
+    return np.array([np.interp(columns, at[:, r], value[:, r]) for r in range(len(rows))], dtype=np.float32)
+
+
+def _smooth_course(trace: Trace, side: int) -> NDArray[np.float64]:
+    """A cubic through the edge, robust against defects: what is rough about it is not its course."""
+    height = trace.edges.shape[1]
+    rows = np.linspace(-1, 1, height)
+    step = max(1, height // 512)
+    y, x = trace.edges[side, ::step], rows[::step]
+    good = np.isfinite(y)
+    if good.sum() < 8:  # noqa: PLR2004  (a cubic and its scatter need more)
+        return trace.course[side]
+    fit = np.polyfit(x[good], y[good], 1)
+    for degree in (1, 3, 3):
+        off = np.abs(y - np.polyval(fit, x))
+        good = np.isfinite(y) & (off <= 3.5 * 1.4826 * np.nanmedian(off) + 1e-6)
+        if good.sum() < 8:  # noqa: PLR2004
+            break
+        fit = np.polyfit(x[good], y[good], degree)
+    course = np.polyval(fit, rows)
+    # Beyond what was measured a cubic runs wild.
+    seen = np.nonzero(np.isfinite(trace.edges[side]))[0]
+    course[: seen[0]] = trace.course[side, : seen[0]]
+    course[seen[-1] + 1 :] = trace.course[side, seen[-1] + 1 :]
+    return course
+
+
+def _defects(
+    ink: NDArray[Any], slack: NDArray[np.float64], traces: list[Trace], lines: list[CoarseLine]
+) -> tuple[list[Defect], NDArray[np.bool_]]:
+    del lines
+    left = np.array([np.where(t.way, _smooth_course(t, 0), np.nan) for t in traces])
+    right = np.array([np.where(t.way, _smooth_course(t, 1), np.nan) for t in traces])
+    width = float(np.median([t.width for t in traces]))
+    space = [float(np.nanmedian(left[k + 1] - right[k])) for k in range(len(traces) - 1)]
+    blur = float(np.median([t.blur.mean() for t in traces]))
+    margin = min([*space, 2 * width])
+    found = find_defects(ink, left, right, slack, margin, max(6.0, 2.5 * blur * blur))
+    hit = np.zeros((len(traces), ink.shape[0]), bool)
+    for defect in found:
+        reach = window_half(blur)
+        rows = slice(max(defect.rows[0] - reach, 0), defect.rows[1] + reach + 1)
+        near = _concerned(defect, left, right, blur)
+        for k in near:
+            hit[k, rows] = True
+    return found, hit
+
+
+def _concerned(
+    defect: Defect, left: NDArray[np.float64], right: NDArray[np.float64], blur: float
+) -> list[int]:
+    """Lines whose edges a defect spoils: those it touches, and those within its blur."""
+    if defect.kind in ("open", "neck", "void"):
+        return [defect.line]
+    rows = np.clip(np.rint(defect.outline[:, 1]).astype(int), 0, left.shape[1] - 1)
+    reach = 4 * blur + 2
+    near = []
+    for k in (defect.line, defect.line + 1):
+        if not 0 <= k < len(left):
+            continue
+        gap = defect.outline[:, 0] - right[k, rows] if k == defect.line else left[k, rows] - defect.outline[:, 0]
+        if (defect.left if k == defect.line else defect.right) or float(np.nanmin(gap)) < reach:
+            near.append(k)
+    return near
