@@ -165,6 +165,8 @@ MISTAKES = {
     "no schema": ("schema = 1\n", "", "", None, 'key "schema": is missing', "add it"),
     "group misspelt": ("P<roll>", "P<rol>", "", "context", "'rol' is no context column", "did you mean 'roll'?"),
     "pattern broken": ("(?P<roll>", "((?P<roll>", "", "context", "is no valid pattern", "single quotes"),
+    "pattern of old": ("P<roll>", "P<roll>[[a]", "", "context", "is no valid pattern: Possible nested set", "quotes"),
+    "pattern too long": ("P<roll>", "P<roll>a{99999999999}", "", "context", "is no valid pattern", "quotes"),
     "pattern without groups": ("(?P<roll>[^_]+)", ".*'\n#", "", "context", "has no named group", "(?P<lot>...)"),
     "zone by name": ('"+01:00"', '"CET"', "", "time_zone", 'key "time_zone": must be an offset', '"+01:00"'),
     "zone too far": ('"+01:00"', '"+77:00"', "", "time_zone", 'key "time_zone": must be an offset', '"+01:00"'),
@@ -258,6 +260,48 @@ def test_keys_are_found_on_their_lines_whatever_stands_around_them(data: st.Data
         text += 'width.lower = 3\n"up]per" = { a = 1 }\n'
     lines = line_numbers(text)
     assert {path: lines[path] for path in truth} == truth
+
+
+VALUES = [
+    "1", "-1", "nan", "inf", "1e400", "true", '"x"', '""', "[]", "[[]]", "[1, 2]", '["a"]', "{}", "{ a = 1 }", "[nan]",
+    "2026-01-01", "2026-01-01T00:00:00Z", "10:00:00", "99999999999999999999", "[{ a = 1 }]", "'\\'", '"\\u0000"',
+    '{ lower = "a" }',
+]  # fmt: skip
+EXTRA = [
+    "kind",
+    "name",
+    "limits",
+    "scale",
+    "feature",
+    "count",
+    "file",
+    "pixels",
+    "context",
+    '"a.b"',
+    "images.y",
+    "locate",
+]
+
+
+@given(
+    changes=st.lists(st.tuples(st.integers(0, 60), st.sampled_from(VALUES), st.sampled_from([*EXTRA, ""])), min_size=1)
+)
+def test_whatever_stands_in_a_recipe_it_is_read_or_refused_in_words(
+    tmp_path_factory: pytest.TempPathFactory, changes: list[tuple[int, str, str]]
+) -> None:
+    lines = RECIPE.splitlines()
+    for number, value, extra in changes:
+        at = number % len(lines)
+        if extra:
+            lines.insert(at, f"{extra} = {value}")
+        elif "=" in lines[at]:
+            lines[at] = f"{lines[at].partition('=')[0]}= {value}"
+    path = tmp_path_factory.mktemp("any") / "R.toml"
+    path.write_text("\n".join(lines), encoding="utf-8")
+    try:
+        assert load_recipe(path).features
+    except RecipeError as error:
+        assert re.search(r"R\.toml, line \d+", str(error))  # noqa: PT017  (either outcome is right)
 
 
 # ---- files ----

@@ -107,7 +107,7 @@ def _syntax(message: str, file: str) -> str:
     where = f"line {line[1]}, column {line[2]}" if line else place.rstrip(")") or "somewhere"
     remedy = (
         "write patterns and Windows paths between single quotes, where \\ stands for itself"
-        if "\\" in what
+        if what.startswith("Unescaped")
         else "correct the spelling of TOML there"
     )
     return f"the recipe cannot be read as TOML:\n  {file}, {where}: {what}; {remedy}"

@@ -6,6 +6,7 @@ import hashlib
 import json
 import math
 import re
+import warnings
 from collections import Counter
 from datetime import datetime
 from pathlib import Path, PureWindowsPath
@@ -98,8 +99,10 @@ def _scale_file(name: str, info: ValidationInfo) -> str:
 
 def _context_pattern(pattern: str) -> str:
     try:
-        groups = re.compile(pattern).groupindex
-    except re.error as error:
+        with warnings.catch_warnings():
+            warnings.simplefilter("error")
+            groups = re.compile(pattern).groupindex
+    except (re.error, Warning, OverflowError, RecursionError) as error:
         msg = f"is no valid pattern: {error}; write it between single quotes, in Python's regular expressions"
         raise _fault(msg) from error
     for group in groups:

@@ -270,7 +270,7 @@ def _table(schema: dict[str, Any], path: Path, raw: object) -> dict[str, Any]:
             elif "oneOf" in node and isinstance(here, dict):
                 node = (
                     {"$ref": kinds[kind]}
-                    if (kind := here.get("kind")) in (kinds := node["discriminator"]["mapping"])
+                    if (kind := str(here.get("kind"))) in (kinds := node["discriminator"]["mapping"])
                     else {}
                 )
             elif "anyOf" in node:
