@@ -192,7 +192,7 @@ TABLES = (MEASUREMENTS, EVENTS, PROFILES, IMAGES)
 
 
 class TableWriter:
-    """Appends rows to a table as they come.
+    """Append rows to a table as they come.
 
     Parameters
     ----------

@@ -216,18 +216,18 @@ def read_ome(xml: str) -> Ome:
     """
     pixels: list[dict[str, str]] = []
 
-    def start(name: str, attributes: dict[str, str]) -> None:
+    def _start(name: str, attributes: dict[str, str]) -> None:
         if name.rpartition(" ")[2] == "Pixels":
             pixels.append(attributes)
 
-    def refuse(*_: object) -> None:
+    def _refuse(*_: object) -> None:
         msg = "it holds a document type"
         raise ValueError(msg)
 
     parser = expat.ParserCreate(namespace_separator=" ")
-    parser.StartElementHandler = start
-    parser.StartDoctypeDeclHandler = refuse
-    parser.EntityDeclHandler = refuse
+    parser.StartElementHandler = _start
+    parser.StartDoctypeDeclHandler = _refuse
+    parser.EntityDeclHandler = _refuse
     try:
         parser.Parse(xml, True)  # noqa: FBT003  (expat takes it by position only)
     except (expat.ExpatError, ValueError) as error:
