@@ -69,7 +69,7 @@ class Table:
 
     @property
     def header(self) -> list[str]:
-        """Names of the columns."""
+        """The columns' names."""
         return [column.name for column in self.columns]
 
 
