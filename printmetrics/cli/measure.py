@@ -1,0 +1,159 @@
+"""``printmetrics measure``: a folder of pictures, one recipe, one folder of results."""
+
+from __future__ import annotations
+
+import os
+import sys
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from printmetrics.cli import INTERRUPTED
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Iterator
+
+    from printmetrics.batch import RunSummary
+    from printmetrics.batch.work import Drawn, Outcome
+
+SOME_FAILED = 1
+NOT_CONFORMING = 3
+MOST_FAILURES = 10
+# Blue and orange against magenta stay apart for colour-blind eyes.
+VERDICT_STYLE = {"conforming": "blue", "undecided": "yellow", "nonconforming": "bold magenta"}
+
+
+@click.command()
+@click.argument("folder", metavar="FOLDER", type=click.Path(path_type=Path))
+@click.option("--recipe", "recipe_path", type=click.Path(path_type=Path), required=True, help="What to measure, TOML.")
+@click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder for the results; made if need be.")
+@click.option(
+    "--workers", type=click.IntRange(min=1), help="Number of processes; by default one for each processor core."
+)
+@click.option(
+    "--set", "settings", multiple=True, metavar="COLUMN=VALUE",
+    help="Fill a column of the tables, such as lot=L7; may be repeated.",
+)  # fmt: skip
+@click.option("--strict", is_flag=True, help="Exit with 3 when a limited reading is not conforming.")
+@click.option(
+    "--pictures", type=click.Choice(["flagged", "all", "none"]), default="flagged", show_default=True,
+    help="Which marked-up pictures to draw; flagged: those a person should look at.",
+)  # fmt: skip
+@click.option("--dry-run", is_flag=True, help="List what would be measured; write nothing.")
+@click.option("--quiet", is_flag=True, help="No progress, no summary; errors only.")
+@click.pass_context
+def measure(  # noqa: PLR0913  (one parameter for each option)
+    ctx: click.Context,
+    *,
+    folder: Path,
+    recipe_path: Path,
+    out: Path,
+    workers: int | None,
+    settings: tuple[str, ...],
+    strict: bool,
+    pictures: Drawn,
+    dry_run: bool,
+    quiet: bool,
+) -> None:
+    """Measure every picture in FOLDER (or one picture) as the recipe says.
+
+    Exit code: 0 all measured; 1 some pictures failed, see images.csv; 2 nothing measured;
+    3 with --strict, a limited reading is not conforming; 130 interrupted.
+    """
+    for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"):
+        os.environ.setdefault(name, "1")  # read once, when numpy is imported just below
+    from printmetrics.batch import measure_folder, plan_run  # noqa: PLC0415  (keeps --help fast)
+
+    plan = plan_run(folder, recipe_path, out, settings)
+    for note in () if quiet else plan.recipe.notes:
+        click.echo(f"note: {note}", err=True)
+    if dry_run:
+        for found in plan.pictures:
+            click.echo(_printable(found.name))
+        click.echo(f"{len(plan.pictures)} pictures would be measured into {out}; nothing was written.", err=True)
+        return
+    try:
+        with _progress(len(plan.pictures), shown=not quiet) as progress:
+            summary = measure_folder(plan, workers=workers or _cores(), drawn=pictures, progress=progress)
+    except KeyboardInterrupt as interrupt:
+        click.echo(f"printmetrics: {interrupt}; the same command measures all of them anew", err=True)
+        ctx.exit(INTERRUPTED)
+    if not quiet:
+        _print_summary(summary)
+    _print_failures(summary)
+    if summary.failed:
+        ctx.exit(SOME_FAILED)
+    if strict and not summary.all_conform:
+        ctx.exit(NOT_CONFORMING)
+
+
+def _cores() -> int:
+    """Return how many cores this process may use, which in a container may be fewer than there are."""
+    return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
+
+
+def _printable(name: str) -> str:
+    """Return a file's name on one line, whatever characters it holds."""
+    return "".join(c if c.isprintable() else ascii(c)[1:-1] for c in name)
+
+
+@contextmanager
+def _progress(total: int, *, shown: bool) -> Iterator[Callable[[Outcome], None] | None]:
+    """Show a bar on a terminal, nothing elsewhere."""
+    if not (shown and sys.stderr.isatty() and os.environ.get("TERM") != "dumb"):
+        yield None
+        return
+    from rich.console import Console  # noqa: PLC0415  (not needed off a terminal)
+    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn  # noqa: PLC0415
+
+    columns = (BarColumn(), MofNCompleteColumn(), TimeRemainingColumn(), TextColumn("{task.description}", markup=False))
+    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("", total=total)
+        yield lambda outcome: bar.update(task, advance=1, description=_printable(outcome.image))
+
+
+def _print_summary(summary: RunSummary) -> None:
+    from rich.console import Console  # noqa: PLC0415
+    from rich.table import Table  # noqa: PLC0415
+    from rich.text import Text  # noqa: PLC0415
+
+    from printmetrics.batch.draw import value_words  # noqa: PLC0415
+
+    console = Console(soft_wrap=False, highlight=False)
+    if not console.is_terminal:
+        console.width = 120
+    if summary.tallies:
+        table = Table(box=None, pad_edge=False, header_style="bold")
+        for heading in ("feature", "quantity", "conforming", "undecided", "nonconforming", "worst", "limits", "where"):
+            table.add_column(heading, justify="right" if heading in VERDICT_STYLE else "left", overflow="fold")
+        for (feature, quantity), tally in summary.tallies.items():
+            worst, counts = tally.worst, (tally.conforming, tally.undecided, tally.nonconforming)
+            table.add_row(
+                Text(feature),
+                quantity,
+                *(Text(str(n), VERDICT_STYLE[v] if n else "dim") for n, v in zip(counts, VERDICT_STYLE, strict=True)),
+                value_words(worst["value"], worst["expanded_u"], worst["unit"]) if worst else "withheld",
+                _limits(worst) if worst else "",
+                Text(f"{worst['item']} in {_printable(worst['image'])}" if worst else ""),
+            )
+        console.print(table)
+    drawn = f"{summary.drawn} marked-up pictures in {summary.out / 'pictures'}; " if summary.drawn else ""
+    click.echo(
+        f"{summary.measured} of {summary.found} pictures measured, {summary.failed} failed; "
+        f"{drawn}tables in {summary.out}"
+    )
+
+
+def _limits(row: dict[str, Any]) -> str:
+    ends = ("" if row[end] is None else f"{row[end]:g}" for end in ("lower", "upper"))
+    return " .. ".join(ends).strip()
+
+
+def _print_failures(summary: RunSummary) -> None:
+    for image, reason in list(summary.reasons.items())[:MOST_FAILURES]:
+        click.echo(f"{_printable(image)}: {_printable(reason)}", err=True)
+    more = len(summary.reasons) - MOST_FAILURES
+    if more > 0:
+        click.echo(f"and {more} more: see {summary.out / 'images.csv'}", err=True)
