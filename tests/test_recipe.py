@@ -161,7 +161,9 @@ MISTAKES = {
                     "or srgb"),
     "gamma zero": ("gamma = 1.0", "gamma = 0", "", "gamma", "must be more than 0", "encoding exponent"),
     "version as number": ('"3"', "3", "", "version", 'key "version": must be text in quotes, got 3', "Your own"),
-    "later schema": ("schema = 1", "schema = 2", "", "schema", 'key "schema": must be 1, got 2', "language: 1"),
+    "later schema": ("schema = 1", "schema = 2", "", "schema", 'key "schema": must be at most 1, got 2', "language: 1"),
+    "schema true": ("schema = 1", "schema = true", "", "schema", "must be a whole number, got true", "language"),
+    "version as date": ('"3"', "2026-01-31", "", "version", 'must be text in quotes, got "2026-01-31"', "Your own"),
     "no schema": ("schema = 1\n", "", "", None, 'key "schema": is missing', "add it"),
     "group misspelt": ("P<roll>", "P<rol>", "", "context", "'rol' is no context column", "did you mean 'roll'?"),
     "pattern broken": ("(?P<roll>", "((?P<roll>", "", "context", "is no valid pattern", "single quotes"),
@@ -481,7 +483,9 @@ def test_with_a_scale_every_limit_is_judged(tmp_path: Path) -> None:
 
 def test_a_recipe_without_limits_says_that_nothing_is_judged(tmp_path: Path) -> None:
     path = tmp_path / "R.toml"
-    path.write_text(RECIPE[: RECIPE.index("[feature.limits]")])
+    path.write_text(
+        RECIPE[: RECIPE.index("[feature.limits]")].replace("count", "# count").replace("centres", "# centres")
+    )
     assert load_recipe(path).notes == ("no feature has limits: nothing will be judged",)
 
 

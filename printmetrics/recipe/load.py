@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import re
 import tomllib
 from pathlib import Path
@@ -49,9 +48,8 @@ def load_recipe(path: str | Path) -> Recipe:
     except (tomllib.TOMLDecodeError, RecursionError) as error:
         raise RecipeError(_syntax(str(error), path.name)) from error
     try:
-        # By way of JSON: there a list may be a tuple and a whole number a float, and nothing else is bent to fit.
-        return Recipe.model_validate_json(
-            json.dumps(raw, default=str), strict=True, context={"folder": path.absolute().parent, "file": path.name}
+        return Recipe.model_validate(
+            _frozen(raw), strict=True, context={"folder": path.absolute().parent, "file": path.name}
         )
     except ValidationError as error:
         msg = explain(error, raw, line_numbers(text), Recipe.model_json_schema(), path.name)
@@ -99,6 +97,13 @@ def correction_sizes(recipe: Recipe) -> dict[str, tuple[int, int]]:
         )
         raise RecipeError(msg)
     return sizes
+
+
+def _frozen(value: object) -> object:
+    """Turn lists into tuples: strict models take nothing else for a tuple."""
+    if isinstance(value, dict):
+        return {key: _frozen(item) for key, item in value.items()}
+    return tuple(map(_frozen, value)) if isinstance(value, list) else value
 
 
 def _syntax(message: str, file: str) -> str:

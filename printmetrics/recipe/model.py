@@ -264,7 +264,7 @@ class Web(_Section):
 class Recipe(_Section):
     """What to measure, where, with which limits."""
 
-    schema_version: Literal[1] = Field(alias="schema", description="Version of the recipe's language: 1.")
+    schema_version: int = Field(alias="schema", ge=1, le=1, description="Version of the recipe's language: 1.")
     name: str = Field(min_length=1, description="Name of the recipe, as in the tables.")
     version: str = Field("", description="Your own version of it, as text.")
     layer: str = Field("", description="The layer it measures; fills the column layer.")
