@@ -20,6 +20,9 @@ PHASES = 64  # positions are linearised about the nearest 1/64 px, exact to the 
 ROWS_PER_BLOCK = 96  # the levels are constant over this many rows, and interpolated between
 MIN_BLUR_PX, MAX_BLUR_PX = 0.35, 40.0
 _REACH = 4.0  # window beyond the edge, in blurs
+_SCOUT_STRIDE, _SCOUT_ROWS = 8, 256  # levels and blur are settled on so many of the rows
+_SCOUT_STEPS, _FULL_STEPS = (3, 8), (3, 6)  # for one edge alone, and for edges that share their light
+_SHORT_STEP = (0.2, 0.02)  # all rows are stepped again while the rms step is this many blurs or more
 _FEWEST_ROWS = 8  # a block with fewer good rows has no levels of its own
 _MISFIT_SIGMAS = 6.0  # a row is a defect's when its residual stands out of the noise by this much,
 _MISFIT_STEP = 0.1  # and its rms is this part of the step: a rough edge alone leaves less
@@ -56,33 +59,35 @@ def position_bound(blur_px: float, contrast: float, noise: float) -> float:
     return math.sqrt(2.0 * math.sqrt(math.pi) * blur_px) * noise / contrast
 
 
-def first_crossing(rows: NDArray[np.float32], low: NDArray[np.float64], high: NDArray[np.float64]) -> NDArray[Any]:
-    """Return where each row steps from `low` to `high`, to a pixel.
+def first_crossing(rows: NDArray[np.float32], low: float, high: float) -> NDArray[np.float64]:
+    """Return where each row steps from `low` to `high`.
 
     The sum of differences to mid-level is least there: the maximum-likelihood place of a sharp step in white
-    noise, so it holds where a threshold would cross many times.
+    noise, so it holds where a threshold would cross many times. The crossing is then interpolated.
 
     Parameters
     ----------
     rows : ndarray of float32, shape (M, N)
         Pixels across the edge. [counts]
-    low, high : ndarray of float, shape (M,)
+    low, high : float
         Levels left and right of it. [counts]
 
     Returns
     -------
     ndarray of float, shape (M,)
-        Column; an edge between columns 3 and 4 is at 3.5. [px]
+        Column. [px]
     """
-    sign = np.where(high > low, 1.0, -1.0)
-    mid = 0.5 * (low + high)
-    total = np.cumsum((rows - mid[:, None].astype(np.float32)) * sign[:, None].astype(np.float32), axis=1)
-    return np.argmin(total, axis=1) + 0.5
+    above = (rows - np.float32(0.5 * (low + high))) * np.float32(1.0 if high > low else -1.0)
+    last = np.argmin(np.cumsum(above, axis=1), axis=1)
+    each = np.arange(len(rows))
+    before, after = above[each, last], above[each, np.minimum(last + 1, rows.shape[1] - 1)]
+    rise = after - before
+    return np.asarray(last + np.clip(-before / np.where(rise > 0, rise, np.inf), 0.0, 1.0) * (rise > 0))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class EdgeFit:
-    """Edges found in a group of rows.
+    """Edges found in the rows of one window.
 
     Parameters
     ----------
@@ -98,8 +103,6 @@ class EdgeFit:
         Levels between the edges, left to right, in blocks of rows. [counts]
     noise : float
         sd of a pixel. [counts]
-    misfit : ndarray of float, shape (M,)
-        rms residual of each row over the noise.
     """
 
     position: NDArray[np.float64]
@@ -108,7 +111,6 @@ class EdgeFit:
     blur: float
     levels: NDArray[np.float64]
     noise: float
-    misfit: NDArray[np.float64]
 
 
 def window_half(blur: float) -> int:
@@ -133,7 +135,7 @@ def gather(image: NDArray[Any], rows: NDArray[np.intp], first: NDArray[np.intp],
     Parameters
     ----------
     image : ndarray, shape (P, Q)
-        Picture. [counts]
+        Picture, contiguous. [counts]
     rows, first : ndarray of int, shape (M,)
         Row and first column; must lie inside.
     n : int
@@ -144,9 +146,67 @@ def gather(image: NDArray[Any], rows: NDArray[np.intp], first: NDArray[np.intp],
     ndarray of float32, shape (M, n)
         Pixels. [counts]
     """
-    flat = image.reshape(-1) if image.flags.c_contiguous else np.ascontiguousarray(image).reshape(-1)
-    start = rows * image.shape[1] + first
-    return flat[start[:, None] + np.arange(n)].astype(np.float32)
+    runs = np.lib.stride_tricks.sliding_window_view(image.reshape(-1), n)
+    return runs[rows * image.shape[1] + first].astype(np.float32)
+
+
+@dataclass(slots=True, kw_only=True)
+class Window:
+    """Rows of pixels across the edges of one fit, with its first guess.
+
+    Parameters
+    ----------
+    pixels : ndarray of float32, shape (M, n)
+        Rows across the edges, each from its own first column. [counts]
+    start : ndarray of float, shape (M, K)
+        First guess of the edges, in columns of `pixels`. [px]
+    levels : ndarray of float, shape (K + 1,)
+        First guess of the levels, left to right. [counts]
+    blur : float
+        First guess of the Gaussian sigma. [px]
+    usable : ndarray of bool, shape (M,)
+        Rows that may be used for the shared terms.
+    fixed_blur : bool
+        Keep the blur as given: for lines too narrow to tell it from their width.
+    """
+
+    pixels: NDArray[np.float32]
+    start: NDArray[np.float64]
+    levels: NDArray[np.float64]
+    blur: float
+    usable: NDArray[np.bool_]
+    fixed_blur: bool
+
+
+def fit_edges(windows: list[Window]) -> list[EdgeFit]:
+    """Fit K error-function edges in each row, with levels and blur shared by the rows of a window.
+
+    Parameters
+    ----------
+    windows : list of Window
+        All with the same number of columns and of edges: they are computed side by side.
+
+    Returns
+    -------
+    list of EdgeFit
+        Positions in columns of each window's pixels.
+
+    Notes
+    -----
+    Gauss-Newton. Levels and blur are settled on a part of the rows first; then all rows are stepped once, and again
+    where noise made the step a long one.
+    """
+    together = int(windows[0].start.shape[1] > 1)
+    scout = _Stack(windows, stride=_SCOUT_STRIDE)
+    for _ in range(_SCOUT_STEPS[together]):
+        scout.step()
+    stack = _Stack(windows, stride=1)
+    stack.blur, stack.shared = scout.blur, scout.shared
+    for _ in range(_FULL_STEPS[together]):
+        stack.step()
+        if stack.longest < _SHORT_STEP[together]:
+            break
+    return stack.fits()
 
 
 class _Functions:
@@ -156,16 +216,16 @@ class _Functions:
     edge j. Every model term is a short combination of these, so a row's normal equations are looked up, not summed.
     """
 
-    def __init__(self, n: int, nearest: NDArray[np.int32], blur: float) -> None:
-        k, self.m = nearest.shape
-        self.names = range(1 + 3 * k)
+    def __init__(self, n: int, nearest: NDArray[np.int32], blur: NDArray[np.float64], group: NDArray[np.intp]) -> None:
+        k = len(nearest)
         self.rows: list[NDArray[np.float32]] = []
-        self._gram: dict[tuple[int, int], NDArray[np.float64] | float] = {(0, 0): float(n)}
+        self._gram: dict[tuple[int, int], Any] = {(0, 0): float(n)}
         for j in range(k):
             first, last = int(nearest[j].min()), int(nearest[j].max())
-            entry = nearest[j] - first
-            u = (np.arange(n) * PHASES - np.arange(first, last + 1)[:, None]) / (PHASES * blur)
-            slope = np.exp(-0.5 * u * u) / (math.sqrt(2 * math.pi) * blur)
+            entry = group * (last - first + 1) + (nearest[j] - first)
+            offset = np.arange(n) * PHASES - np.arange(first, last + 1)[:, None]
+            u = (offset / (PHASES * blur[:, None, None])).reshape(-1, n)
+            slope = np.exp(-0.5 * u * u) * np.repeat(1.0 / (math.sqrt(2 * math.pi) * blur), last - first + 1)[:, None]
             own = [ndtr(u), slope, slope * u]
             self.rows += [f.astype(np.float32)[entry] for f in own]
             for a in range(3):
@@ -182,7 +242,7 @@ class _Functions:
         """Return the inner product of each function with each row."""
         return [residual.sum(axis=1), *[np.einsum("ij,ij->i", f, residual) for f in self.rows]]
 
-    def product(self, one: _Term, other: _Term) -> NDArray[np.float64] | float:
+    def product(self, one: _Term, other: _Term) -> Any:  # noqa: ANN401  (an array, or a number that stands for one)
         """Return the inner product of two combinations of functions in each row."""
         return sum(wa * wb * self._gram[min(a, b), max(a, b)] for a, wa in one for b, wb in other)
 
@@ -190,72 +250,64 @@ class _Functions:
 _Term = list[tuple[int, Any]]
 
 
-def _blocks(n_rows: int) -> NDArray[np.intp]:
-    count = max(1, round(n_rows / ROWS_PER_BLOCK))
-    return (np.arange(n_rows) * count) // n_rows
+class _Stack:
+    """Windows computed side by side: their rows follow each other, window by window."""
 
+    def __init__(self, windows: list[Window], *, stride: int) -> None:
+        self.k = windows[0].start.shape[1]
+        self.sizes = [len(w.pixels[::_few(len(w.pixels), stride)]) for w in windows]
+        every = [_few(len(w.pixels), stride) for w in windows]
+        self.pixels = np.concatenate([w.pixels[::e] for w, e in zip(windows, every, strict=True)])
+        self.x = np.concatenate([w.start[::e] for w, e in zip(windows, every, strict=True)]).T.copy()
+        self.usable = np.concatenate([w.usable[::e] for w, e in zip(windows, every, strict=True)])
+        self.group = np.repeat(np.arange(len(windows)), self.sizes)
+        self.starts = np.concatenate([[0], np.cumsum(self.sizes)])
+        self.blur = np.array([w.blur for w in windows])
+        self.free = np.array([not w.fixed_blur for w in windows])
+        self.span = np.array([np.ptp(w.levels) for w in windows])
+        self._block_rows([len(w.pixels) for w in windows])
+        self.shared = np.repeat(np.array([w.levels for w in windows], dtype=np.float64), self.blocks, axis=0)
 
-def _to_rows(per_block: NDArray[np.float64], block: NDArray[np.intp]) -> NDArray[np.float32]:
-    """Interpolate block values linearly to rows."""
-    count = len(per_block)
-    if count == 1:
-        return np.broadcast_to(per_block.astype(np.float32), (len(block), per_block.shape[1]))
-    centre = (np.arange(count) + 0.5) * len(block) / count - 0.5
-    place = np.clip(np.arange(len(block)), centre[0], centre[-1])
-    low = np.clip(np.searchsorted(centre, place, side="right") - 1, 0, count - 2)
-    part = ((place - centre[low]) / (centre[low + 1] - centre[low]))[:, None]
-    return ((1 - part) * per_block[low] + part * per_block[low + 1]).astype(np.float32)
+    def _block_rows(self, full: list[int]) -> None:
+        """Cut each window into blocks, and know between which two blocks' middles each row lies."""
+        self.blocks = [max(1, round(size / ROWS_PER_BLOCK)) for size in full]
+        first = np.concatenate([[0], np.cumsum(self.blocks)])
+        block, low, high, part = [], [], [], []
+        for size, count, start in zip(self.sizes, self.blocks, first, strict=False):
+            at = np.arange(size)
+            block.append((at * count) // size + start)
+            place = np.clip((at + 0.5) * count / size - 0.5, 0.0, count - 1.0)
+            below = np.minimum(place.astype(np.intp), max(count - 2, 0))
+            low.append(below + start)
+            high.append(np.minimum(below + 1, count - 1) + start)
+            part.append(place - below)
+        self.block = np.concatenate(block)
+        self.low, self.high = np.concatenate(low), np.concatenate(high)
+        self.part = np.concatenate(part).astype(np.float32)
+        self.block_group = np.repeat(np.arange(len(full)), self.blocks)
+        self.bounds = np.searchsorted(self.block, np.arange(first[-1]))
 
+    def _row_levels(self) -> NDArray[np.float32]:
+        levels = self.shared.astype(np.float32)
+        return np.asarray(levels[self.low] + self.part[:, None] * (levels[self.high] - levels[self.low])).T
 
-def fit_edges(
-    pixels: NDArray[np.float32],
-    start: NDArray[np.float64],
-    levels: NDArray[np.float64],
-    blur: float,
-    *,
-    iterations: int = 4,
-    usable: NDArray[np.bool_] | None = None,
-    fixed_blur: bool = False,
-) -> EdgeFit:
-    """Fit K error-function edges in each row, with levels and blur shared.
+    def _per_window(self, values: NDArray[np.float64], chosen: NDArray[np.bool_]) -> NDArray[np.float64]:
+        """Median of the chosen rows of each window."""
+        result = np.empty(len(self.sizes))
+        for g in range(len(self.sizes)):
+            part = slice(self.starts[g], self.starts[g + 1])
+            own = values[part][chosen[part]]
+            result[g] = np.median(own if len(own) else values[part])
+        return result
 
-    Parameters
-    ----------
-    pixels : ndarray of float32, shape (M, N)
-        Rows across the edges, each from its own first column. [counts]
-    start : ndarray of float, shape (M, K)
-        First guess, in columns of `pixels`. [px]
-    levels : ndarray of float, shape (K + 1,)
-        First guess of the levels, left to right. [counts]
-    blur : float
-        First guess of the Gaussian sigma. [px]
-    iterations : int, optional
-        Gauss-Newton steps.
-    usable : ndarray of bool, shape (M,), optional
-        Rows that may be used for the shared terms.
-    fixed_blur : bool, optional
-        Keep the blur as given: for lines too narrow to tell it from their width.
-
-    Returns
-    -------
-    EdgeFit
-        Positions in columns of `pixels`.
-    """
-    n_rows, n = pixels.shape
-    k = start.shape[1]
-    block = _blocks(n_rows)
-    bounds = np.searchsorted(block, np.arange(int(block[-1]) + 1))
-    shared = np.tile(levels.astype(np.float64), (len(bounds), 1))
-    x = start.T.copy()
-    weight = np.ones(n_rows) if usable is None else usable.astype(np.float64)
-    dof = max(n - k, 1)
-    worst = 1 + _MISFIT_SIGMAS * math.sqrt(2 / dof)
-    for turn in range(iterations + 1):
-        nearest = np.clip(np.rint(x * PHASES), -PHASES, (n + 1) * PHASES).astype(np.int32)
-        functions = _Functions(n, nearest, blur)
-        row_levels = _to_rows(shared, block)
-        steps = np.diff(row_levels, axis=1).T
-        residual = pixels - row_levels[:, :1]
+    def step(self) -> None:
+        """Take one Gauss-Newton step, and keep what the results need."""
+        k, n, group = self.k, self.pixels.shape[1], self.group
+        nearest = np.clip(np.rint(self.x * PHASES), -PHASES, (n + 1) * PHASES).astype(np.int32)
+        functions = _Functions(n, nearest, self.blur, group)
+        levels = self._row_levels()
+        steps = np.diff(levels, axis=0)
+        residual = self.pixels - levels[0][:, None]
         for j in range(k):
             residual -= steps[j][:, None] * functions.rows[3 * j]
         dots = functions.dots(residual)
@@ -263,58 +315,76 @@ def fit_edges(
         terms: list[_Term] = [[(0, 1.0), (1, -1.0)]]
         terms += [[(3 * j + 1, 1.0), (3 * j + 4, -1.0)] for j in range(k - 1)]
         terms += [[(3 * k - 2, 1.0)], [(3 * j + 3, -steps[j]) for j in range(k)]]
-        inverse = _inverse([[functions.product(a, b) for b in place] for a in place])
-        score = [sum(w * dots[f] for f, w in a) for a in place]
-        move = np.einsum("ijm,jm->im", inverse, np.array(score))
+        self.inverse = _inverse([[functions.product(a, b) for b in place] for a in place])
+        score = np.array([sum(w * dots[f] for f, w in a) for a in place])
+        move = np.einsum("ijm,jm->im", self.inverse, score)
         # The positions are eliminated: what is left of the shared terms' normal equations is summed over rows.
-        cross = [[functions.product(a, b) for b in terms] for a in place]
-        gain = np.einsum("ijm,jam->iam", inverse, np.array(cross))
-        squares = np.einsum("ij,ij->i", residual, residual) - sum(move[i] * score[i] for i in range(k))
-        typical = float(np.median(squares[weight > 0] if weight.any() else squares))
-        noise = math.sqrt(max(typical, 1e-12) / (dof * (1 - 2 / (9 * dof)) ** 3))
-        misfit = np.sqrt(np.maximum(squares, 0.0) / dof) / noise
+        cross = np.array([[functions.product(a, b) for b in terms] for a in place])
+        self.gain = np.einsum("ijm,jam->iam", self.inverse, cross)
+        squares = np.einsum("ij,ij->i", residual, residual) - (move * score).sum(axis=0)
+        dof = max(n - k, 1)
+        typical = self._per_window(squares, self.usable)
+        self.noise = np.sqrt(np.maximum(typical, 1e-12) / (dof * (1 - 2 / (9 * dof)) ** 3))
+        blur = self.blur[group]
         # A row hit by a defect has no say in what is shared.
-        limit = max(worst, (_MISFIT_STEP * float(np.ptp(row_levels, axis=1).mean()) / noise) ** 2)
-        good = (misfit**2 < limit) & (np.abs(move) < 2 * blur + 1).all(axis=0)
-        w = weight * good if (weight * good).sum() > n_rows / 4 else weight
-        big = np.empty((len(bounds), k + 2, k + 2))
+        largest = np.maximum((1 + _MISFIT_SIGMAS * math.sqrt(2 / dof)) * self.noise**2, (_MISFIT_STEP * self.span) ** 2)
+        self.good = (squares / dof < largest[group]) & (np.abs(move) < 2 * blur + 1).all(axis=0)
+        enough = np.bincount(group, weights=self.usable & self.good) > np.bincount(group) / 4
+        self.weight = (self.usable & (self.good | ~enough[group])).astype(np.float64)
+        big = np.empty((len(self.bounds), k + 2, k + 2))
         for a in range(k + 2):
             for b in range(a, k + 2):
-                each = functions.product(terms[a], terms[b]) - sum(cross[i][a] * gain[i][b] for i in range(k))
-                big[:, a, b] = big[:, b, a] = np.add.reduceat(each * w, bounds)
-        shared_fit = _SharedFit(big, np.add.reduceat(w, bounds), fixed_blur=fixed_blur)
-        if turn == iterations:
-            break
+                each = functions.product(terms[a], terms[b]) - (cross[:, a] * self.gain[:, b]).sum(axis=0)
+                big[:, a, b] = big[:, b, a] = np.add.reduceat(each * self.weight, self.bounds)
         pull = np.stack(
-            [sum(v * dots[f] for f, v in a) - sum(gain[i][n_a] * score[i] for i in range(k))
-             for n_a, a in enumerate(terms)]
+            [sum(v * dots[f] for f, v in a) - (self.gain[:, j] * score).sum(axis=0) for j, a in enumerate(terms)]
         )
-        d_levels, d_blur = shared_fit.solve(np.add.reduceat(pull * w, bounds, axis=1).T)
-        d_blur = min(max(d_blur, -0.4 * blur, MIN_BLUR_PX - blur), 0.6 * blur, MAX_BLUR_PX - blur)
-        change = np.vstack([d_levels.T[:, block], np.full(n_rows, d_blur)])
-        answer = np.einsum("iam,am->im", gain, change)
-        x = nearest / PHASES + np.clip(move - answer, -1.5 * blur, 1.5 * blur)
-        shared = shared + d_levels
-        blur += d_blur
-    position = nearest / PHASES + np.clip(move, -1.5 * blur, 1.5 * blur)
-    inside = ((position > -0.5) & (position < n - 0.5)).all(axis=0)  # noqa: PLR2004  (pixel borders)
-    keep = good & inside & (np.abs(steps).min(axis=0) > 0.05 * np.ptp(levels))
-    position[:, ~keep] = np.nan
-    used = w * keep
-    total = max(float(used.sum()), 1.0)
-    own = (inverse * used).sum(axis=2) / total**2
-    mean_gain = np.add.reduceat(gain * used, bounds, axis=2) / total
-    u_row = np.sqrt(np.median(inverse[range(k), range(k)], axis=1)) * noise
-    return EdgeFit(
-        position=position.T,
-        u_row=u_row,
-        mean_covariance=(own + shared_fit.carried(mean_gain)) * noise**2,
-        # Each row's position follows its noise, which makes the aligned edge look sharper by just that variance.
-        blur=blur if fixed_blur else math.hypot(blur, float(u_row.mean())),
-        levels=shared,
-        noise=noise,
-        misfit=misfit,
-    )
+        rows = np.add.reduceat(self.weight, self.bounds)
+        self.fit = _SharedFit(big, rows, self.block_group, self.free)
+        d_levels, d_blur = self.fit.solve(np.add.reduceat(pull * self.weight, self.bounds, axis=1).T)
+        d_blur = np.clip(d_blur, np.maximum(-0.4 * self.blur, MIN_BLUR_PX - self.blur),
+                         np.minimum(0.6 * self.blur, MAX_BLUR_PX - self.blur))
+        change = np.vstack([d_levels.T[:, self.block], d_blur[group]])
+        move = np.clip(move - np.einsum("iam,am->im", self.gain, change), -1.5 * blur, 1.5 * blur)
+        self.x = nearest / PHASES + move
+        self.shared = self.shared + d_levels
+        self.blur = self.blur + d_blur
+        self.steps = steps
+        rms = np.sqrt(np.bincount(group, weights=(move**2).max(axis=0) * self.good) / np.maximum(
+            np.bincount(group, weights=self.good), 1.0))
+        self.longest = float((rms / self.blur).max())
+
+    def fits(self) -> list[EdgeFit]:
+        """Return each window's edges after the last step."""
+        n = self.pixels.shape[1]
+        inside = ((self.x > -0.5) & (self.x < n - 0.5)).all(axis=0)  # noqa: PLR2004  (pixel borders)
+        keep = self.good & inside & (np.abs(self.steps).min(axis=0) > 0.05 * self.span[self.group])
+        position = np.where(keep, self.x, np.nan)
+        used = self.weight * keep
+        total = np.maximum(np.bincount(self.group, weights=used, minlength=len(self.sizes)), 1.0)
+        own = np.add.reduceat(self.inverse * used, self.starts[:-1], axis=2) / total**2
+        mean_gain = np.add.reduceat(self.gain * used, self.bounds, axis=2) / total[self.block_group]
+        carried = self.fit.carried(mean_gain)
+        fits = []
+        for g in range(len(self.sizes)):
+            part = slice(self.starts[g], self.starts[g + 1])
+            noise = float(self.noise[g])
+            u_row = np.sqrt(np.median(self.inverse[range(self.k), range(self.k), part], axis=1)) * noise
+            # Each row's position follows its noise, which makes the aligned edge look sharper by just that variance.
+            blur = math.hypot(self.blur[g], float(u_row.mean())) if self.free[g] else float(self.blur[g])
+            fits.append(
+                EdgeFit(
+                    position=position[:, part].T, u_row=u_row, blur=blur, noise=noise,
+                    mean_covariance=(own[:, :, g] + carried[g]) * noise**2,
+                    levels=self.shared[self.block_group == g],
+                )
+            )
+        return fits
+
+
+def _few(rows: int, stride: int) -> int:
+    """Stride that leaves enough rows of a window for its levels and blur."""
+    return max(1, min(stride, rows // _SCOUT_ROWS))
 
 
 def _inverse(matrix: list[list[Any]]) -> NDArray[np.float64]:
@@ -329,25 +399,33 @@ def _inverse(matrix: list[list[Any]]) -> NDArray[np.float64]:
 
 
 class _SharedFit:
-    """Normal equations of the levels of each block and the one blur, the positions eliminated."""
+    """Normal equations of the levels of each block and the one blur of each window, the positions eliminated."""
 
-    def __init__(self, big: NDArray[np.float64], rows: NDArray[np.float64], *, fixed_blur: bool) -> None:
+    def __init__(
+        self, big: NDArray[np.float64], rows: NDArray[np.float64], group: NDArray[np.intp], free: NDArray[np.bool_]
+    ) -> None:
         n_levels = big.shape[1] - 1
-        self.empty = rows < _FEWEST_ROWS
+        self.group = group
         scale = np.trace(big[:, :-1, :-1], axis1=1, axis2=2)[:, None, None]
         self.levels_cov = np.linalg.inv(big[:, :-1, :-1] + np.eye(n_levels) * (1e-9 * scale + 1e-12))
-        self.levels_cov[self.empty] = 0.0
+        self.levels_cov[rows < _FEWEST_ROWS] = 0.0
         self.to_blur = np.einsum("bac,bc->ba", self.levels_cov, big[:, :-1, -1])
-        info = float(np.sum(big[:, -1, -1] - np.einsum("ba,ba->b", big[:, :-1, -1], self.to_blur)))
-        self.blur_var = 0.0 if fixed_blur or info <= 0 else 1.0 / info
+        info = np.bincount(group, weights=big[:, -1, -1] - np.einsum("ba,ba->b", big[:, :-1, -1], self.to_blur))
+        self.blur_var = np.where(free & (info > 0), 1.0 / np.where(info > 0, info, 1.0), 0.0)
 
-    def solve(self, pull: NDArray[np.float64]) -> tuple[NDArray[np.float64], float]:
-        """Return the change of each block's levels, and of the blur."""
-        change = self.blur_var * float(np.sum(pull[:, -1] - np.einsum("ba,ba->b", pull[:, :-1], self.to_blur)))
-        return np.einsum("bac,bc->ba", self.levels_cov, pull[:, :-1]) - self.to_blur * change, change
+    def solve(self, pull: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Return the change of each block's levels, and of each window's blur."""
+        left = pull[:, -1] - np.einsum("ba,ba->b", pull[:, :-1], self.to_blur)
+        change = self.blur_var * np.bincount(self.group, weights=left)
+        levels = np.einsum("bac,bc->ba", self.levels_cov, pull[:, :-1]) - self.to_blur * change[self.group][:, None]
+        return levels, change
 
     def carried(self, gain: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Return the covariance of the mean positions that comes from the shared terms."""
-        from_levels = np.einsum("iab,bac,jcb->ij", gain[:, :-1], self.levels_cov, gain[:, :-1])
-        slope = np.sum(gain[:, -1] - np.einsum("iab,ba->ib", gain[:, :-1], self.to_blur), axis=1)
-        return np.asarray(from_levels + np.outer(slope, slope) * self.blur_var)
+        """Return the covariance of the mean positions that comes from the shared terms, by window."""
+        starts = np.searchsorted(self.group, np.arange(len(self.blur_var)))
+        from_levels = np.add.reduceat(
+            np.einsum("iab,bac,jcb->bij", gain[:, :-1], self.levels_cov, gain[:, :-1]), starts, axis=0
+        )
+        each = gain[:, -1] - np.einsum("iab,ba->ib", gain[:, :-1], self.to_blur)
+        slope = np.add.reduceat(each, starts, axis=1)
+        return np.asarray(from_levels + np.einsum("ig,jg,g->gij", slope, slope, self.blur_var))

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from scipy.special import ndtr
 
-from printmetrics.analysis.edges import EdgeFit, first_crossing, fit_edges, gather, window_half
+from printmetrics.analysis.edges import EdgeFit, Window, first_crossing, fit_edges, gather, window_half
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -84,14 +84,15 @@ class Trace:
 
 
 @dataclass(slots=True)
-class _Window:
-    """One fit: the edges (line, side) it moves, those of them it is made for, and the pixels it sees."""
+class _Cut:
+    """Pixels of one fit, with the edges (line, side) it moves, and those of them it is made for."""
 
     edges: tuple[tuple[int, int], ...]
     own: tuple[tuple[int, int], ...]
     rows: NDArray[np.intp]
     first: NDArray[np.intp]
     pixels: NDArray[np.float32]
+    window: Window | None = None
     fit: EdgeFit | None = None
 
 
@@ -150,28 +151,28 @@ class _Tracer:
             float(np.median(self.image[rows, np.clip(np.rint(p), 0, self.width - 1).astype(int)])) for p in places
         ])
 
-    def _search(self, k: int, side: int, blur: float) -> tuple[_Window, NDArray[np.float64]]:
+    def _search(self, k: int, side: int, blur: float, every: int = 1) -> tuple[_Cut, NDArray[np.float64]]:
         """Pixels around a coarse edge, and the edge to a pixel."""
         far = math.ceil(4 * blur + _SEARCH_PX)
         inner = max(2, min(far, round(self.line_width[k] / 2)))
         outer = max(2, min(far, round(self.space[k, side] / 2)))
         before, after = (outer, inner) if side == 0 else (inner, outer)
         centre = self.course[k, side]
-        rows = np.nonzero((centre > 1) & (centre < self.width - 2))[0]
+        rows = np.nonzero((centre > 1) & (centre < self.width - 2))[0][::every]
         first = np.rint(centre[rows]).astype(np.intp) - before
         n = min(before + after + 1, self.width)
         first = np.clip(first, 0, self.width - n)
         pixels = gather(self.image, rows, first, n)
         low, high = self.levels[k][side : side + 2]
-        start = first_crossing(pixels, np.full(len(rows), low), np.full(len(rows), high))
-        return _Window(((k, side),), ((k, side),), rows, first, pixels), start
+        start = first_crossing(pixels, float(low), float(high))
+        return _Cut(((k, side),), ((k, side),), rows, first, pixels), start
 
     def _first_blur(self) -> float:
         """Blur from the mean profile of the widest line's edge, aligned to a pixel."""
         k = int(np.argmax(self.line_width))
         guess = 2.0
         for _ in range(3):
-            window, start = self._search(k, 0, guess)
+            window, start = self._search(k, 0, guess, every=max(1, len(self.all_rows) // _SHAPE_ROWS))
             use = self.usable[k][window.rows]
             if not use.any():
                 return guess
@@ -189,7 +190,7 @@ class _Tracer:
             guess = new
         return new
 
-    def _window(self, own: tuple[tuple[int, int], ...], edges: NDArray[np.float64], blur: float) -> _Window:
+    def _cut(self, own: tuple[tuple[int, int], ...], edges: NDArray[np.float64], blur: float) -> _Cut:
         """Cut the pixels of a fit out of the picture, centred on the edges it is made for."""
         half = window_half(blur)
         outer = np.array([edges[own[0]], edges[own[-1]]])
@@ -206,92 +207,103 @@ class _Tracer:
             held.insert(0, (k - 1, 1))
         if last_side == 1 and last + 1 < len(edges) and self.space[last, 1] < half:
             held.append((last + 1, 0))
-        return _Window(tuple(held), own, rows, first, gather(self.image, rows, first, n))
+        return _Cut(tuple(held), own, rows, first, gather(self.image, rows, first, n))
 
     def traces(self) -> list[Trace | None]:
-        """Fit all lines, widest first, until the windows suit the blur; overlapping ones in turn."""
+        """Fit all lines until the windows suit the blur: first those wide enough to tell it, then the narrow ones."""
         lines = range(len(self.course))
         edges = np.full_like(self.course, np.nan)
         for k in lines:
             for side in (0, 1):
                 window, start = self._search(k, side, self.blur)
                 edges[k, side, window.rows] = window.first + start
-        order = sorted(lines, key=lambda k: -self.line_width[k])
-        fits: list[list[_Window]] = [[] for _ in lines]
+        fits: list[list[_Cut]] = [[] for _ in lines]
         blurs = np.full((len(self.course), 2), np.nan)
         due = set(lines)
         for turn in range(_PASSES):
-            for k in order:
-                if k not in due:
-                    continue
-                wide = [
-                    blurs[j].mean() for j in lines
-                    if np.isfinite(blurs[j]).all() and self.line_width[j] > _KNOWN_BLUR * blurs[j].max()
-                ]
-                common = float(np.median(wide)) if wide else self.blur
-                blur = float(blurs[k].max()) if np.isfinite(blurs[k]).all() else common
-                known = bool(wide) and self.line_width[k] < _KNOWN_BLUR * common
-                blur = common if known else blur
+            fitted = [k for k in lines if np.isfinite(blurs[k]).all()]
+            wide = [blurs[k].mean() for k in fitted if self.line_width[k] > _KNOWN_BLUR * blurs[k].max()]
+            common = float(np.median(wide)) if wide else self.blur
+            narrow = {k for k in due if self.line_width[k] < _KNOWN_BLUR * common}
+            if turn == 0 and len(narrow) < len(due):
+                narrow, late = set(), narrow
+            else:
+                late = set()
+            for k in due - late:
+                blur = float(blurs[k].max()) if k in fitted and not (wide and k in narrow) else common
                 together = self.line_width[k] < _APART * blur + 2
                 sides = (((k, 0), (k, 1)),) if together else (((k, 0),), ((k, 1),))
-                fits[k] = [self._window(own, edges, blur) for own in sides]
-                for window in fits[k]:
-                    self._fit(window, edges, blurs, blur, known=known)
-                if any(w.fit is None for w in fits[k]):
+                fits[k] = [self._cut(own, edges, blur) for own in sides]
+                for cut in fits[k]:
+                    cut.window = self._window(cut, edges, blurs, blur, known=bool(wide) and k in narrow)
+            self._fit([cut for k in due - late for cut in fits[k]])
+            for k in sorted(due - late):
+                if any(cut.fit is None for cut in fits[k]):
                     blurs[k] = np.nan
                     due.discard(k)
                     continue
-                settled = turn > 0 or not self.space[k].min() < 2 * window_half(blur)
-                for window in fits[k]:
-                    assert window.fit is not None
-                    for own in window.own:
+                settled = turn > 0 or not self.space[k].min() < 2 * window_half(self.blur)
+                for cut in fits[k]:
+                    assert cut.fit is not None
+                    assert cut.window is not None
+                    settled &= abs(cut.fit.blur - cut.window.blur) < _SETTLED * cut.window.blur
+                    median = np.median(cut.fit.levels, axis=0)
+                    for own in cut.own:
+                        at = cut.edges.index(own)
                         edges[own] = np.nan
-                        edges[own][window.rows] = window.first + window.fit.position[:, window.edges.index(own)]
-                        blurs[own] = window.fit.blur
-                    settled &= abs(window.fit.blur - blur) < _SETTLED * blur
+                        edges[own][cut.rows] = cut.first + cut.fit.position[:, at]
+                        blurs[own] = cut.fit.blur
+                        self.levels[own[0]][own[1] : own[1] + 2] = median[at : at + 2]
                 if settled:
                     due.discard(k)
+            if not due:
+                break
         return [self._trace(k, edges[k], fits[k], blurs[k]) for k in lines]
 
-    def _fit(
-        self, window: _Window, edges: NDArray[np.float64], blurs: NDArray[np.float64], blur: float, *, known: bool
-    ) -> None:
-        usable = self.usable[window.own[0][0]][window.rows]
-        if usable.sum() < _FEWEST_ROWS:
-            return
-        pixels = window.pixels - self._others(window, edges, blurs, blur)
-        start = np.stack([self._place(e, edges)[window.rows] for e in window.edges], axis=1) - window.first[:, None]
-        levels = [self.levels[window.edges[0][0]][window.edges[0][1]]]
-        levels += [self.levels[k][side + 1] for k, side in window.edges]
-        if np.ptp(levels) == 0:
-            return
-        fit = fit_edges(
-            pixels, start, np.array(levels), blur, iterations=_STEPS, usable=usable, fixed_blur=known
+    def _window(
+        self, cut: _Cut, edges: NDArray[np.float64], blurs: NDArray[np.float64], blur: float, *, known: bool
+    ) -> Window | None:
+        """Make a cut ready to be fitted; None where too few rows or no step at all are left."""
+        usable = self.usable[cut.own[0][0]][cut.rows]
+        levels = [self.levels[cut.edges[0][0]][cut.edges[0][1]]]
+        levels += [self.levels[k][side + 1] for k, side in cut.edges]
+        if usable.sum() < _FEWEST_ROWS or np.ptp(levels) == 0:
+            return None
+        start = np.stack([self._place(e, edges)[cut.rows] for e in cut.edges], axis=1) - cut.first[:, None]
+        return Window(
+            pixels=cut.pixels - self._others(cut, edges, blurs, blur), start=start, levels=np.array(levels), blur=blur,
+            usable=usable, fixed_blur=known,
         )
-        window.fit = fit
-        median = np.median(fit.levels, axis=0)
-        for k, side in window.own:
-            at = window.edges.index((k, side))
-            self.levels[k][side : side + 2] = median[at : at + 2]
+
+    def _fit(self, cuts: list[_Cut]) -> None:
+        """Fit cuts of one shape side by side."""
+        alike: dict[tuple[int, int], list[_Cut]] = {}
+        for cut in cuts:
+            cut.fit = None
+            if cut.window is not None:
+                alike.setdefault((cut.pixels.shape[1], len(cut.edges)), []).append(cut)
+        for group in alike.values():
+            for cut, fit in zip(group, fit_edges([cut.window for cut in group if cut.window]), strict=True):
+                cut.fit = fit
 
     def _place(self, edge: tuple[int, int], edges: NDArray[np.float64]) -> NDArray[np.float64]:
         """Where an edge is in each row, as far as known."""
         return np.where(np.isfinite(edges[edge]), edges[edge], self.course[edge])
 
     def _others(
-        self, window: _Window, edges: NDArray[np.float64], blurs: NDArray[np.float64], blur: float
+        self, cut: _Cut, edges: NDArray[np.float64], blurs: NDArray[np.float64], blur: float
     ) -> NDArray[np.float32] | float:
         """Light that edges near by, which the fit doesn't hold, bring into its window beyond the plateau next to it."""
-        n = window.pixels.shape[1]
+        n = cut.pixels.shape[1]
         extra: NDArray[np.float64] | float = 0.0
         columns = np.arange(n)
-        first, last = window.edges[0], window.edges[-1]
+        first, last = cut.edges[0], cut.edges[-1]
         for k in range(max(first[0] - 1, 0), min(last[0] + 2, len(edges))):
             for side in (0, 1):
                 edge = (k, side)
                 if first <= edge <= last:
                     continue
-                place = self._place(edge, edges)[window.rows] - window.first
+                place = self._place(edge, edges)[cut.rows] - cut.first
                 to_right = edge > last
                 middle = float(np.median(place))
                 if middle > n + 5 * blur if to_right else middle < -5 * blur:
@@ -302,20 +314,20 @@ class _Tracer:
         return np.asarray(extra, dtype=np.float32) if np.ndim(extra) else 0.0
 
     def _trace(
-        self, k: int, edges: NDArray[np.float64], windows: list[_Window], blurs: NDArray[np.float64]
+        self, k: int, edges: NDArray[np.float64], cuts: list[_Cut], blurs: NDArray[np.float64]
     ) -> Trace | None:
-        if any(w.fit is None for w in windows) or np.isfinite(edges).all(axis=0).sum() < _FEWEST_ROWS:
+        if any(w.fit is None for w in cuts) or np.isfinite(edges).all(axis=0).sum() < _FEWEST_ROWS:
             return None
         covariance, u_row, shift = np.zeros((2, 2)), np.zeros(2), np.zeros(2)
         over, bare, ink, noise = [], [], [], []
-        for window in windows:
-            fit = window.fit
+        for cut in cuts:
+            fit = cut.fit
             assert fit is not None
-            at = [window.edges.index(own) for own in window.own]
-            sides = [side for _, side in window.own]
+            at = [cut.edges.index(own) for own in cut.own]
+            sides = [side for _, side in cut.own]
             covariance[np.ix_(sides, sides)] = fit.mean_covariance[np.ix_(at, at)]
             u_row[sides] = fit.u_row[at]
-            beyond, shift[sides] = self._shape(window, fit, at)
+            beyond, shift[sides] = self._shape(cut, fit, at)
             over.append(beyond)
             noise.append(fit.noise)
             for j, side in zip(at, sides, strict=True):
@@ -330,17 +342,17 @@ class _Tracer:
             overshoot=float(np.mean(over)), shape_shift=shift,
         )
 
-    def _shape(self, window: _Window, fit: EdgeFit, own: list[int]) -> tuple[float, list[float]]:
+    def _shape(self, cut: _Cut, fit: EdgeFit, own: list[int]) -> tuple[float, list[float]]:
         """Compare the mean edge seen with the one fitted: overshoot beside it, shift of its middle."""
         rows = np.nonzero(np.isfinite(fit.position).all(axis=1))[0]
         if len(rows) < _FEWEST_ROWS:
             return 0.0, [0.0 for _ in own]
         rows = rows[:: max(1, len(rows) // _SHAPE_ROWS)]
         levels = np.median(fit.levels, axis=0)
-        columns = np.arange(window.pixels.shape[1])
-        u = [(columns - fit.position[rows, j, None]) / fit.blur for j in range(len(window.edges))]
+        columns = np.arange(cut.pixels.shape[1])
+        u = [(columns - fit.position[rows, j, None]) / fit.blur for j in range(len(cut.edges))]
         model = levels[0] + sum((levels[j + 1] - levels[j]) * ndtr(u[j]) for j in range(len(u)))
-        residual = window.pixels[rows] - model
+        residual = cut.pixels[rows] - model
         over, shift = [], []
         for j in own:
             step = levels[j + 1] - levels[j]
@@ -353,7 +365,6 @@ class _Tracer:
 
 
 _FEWEST_ROWS = 16
-_STEPS = 2
 
 
 def _course(rows: NDArray[np.float64], edge: NDArray[np.float64], height: int) -> NDArray[np.float64]:
