@@ -12,6 +12,8 @@ import numpy as np
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+_FEWEST_ROWS, _COURSE_ROWS = 8, 512  # a cubic and its scatter need the one, and gain nothing beyond the other
+_OUTLIER = 5.2  # median deviations: 3.5 sd
 _STAND_OUT = 10.0  # half the contrast stands five noise sds out of the smoothed picture
 
 
@@ -103,6 +105,7 @@ def find_defects(
     ink: NDArray[Any],
     left: NDArray[np.float64],
     right: NDArray[np.float64],
+    way: NDArray[np.bool_],
     slack: NDArray[np.float64],
     margin: float,
     least_area: float,
@@ -114,7 +117,9 @@ def find_defects(
     ink : ndarray of uint8, shape (M, N)
         255 where inked.
     left, right : ndarray of float, shape (K, M)
-        Course of each line's edges, left to right; NaN where the line isn't in the picture. [px]
+        Course of each line's edges, left to right. [px]
+    way : ndarray of bool, shape (K, M)
+        Rows in which the whole line is in the picture; only there can ink be missing.
     slack : ndarray of float, shape (K, 2)
         How far from the course an edge may be and still be rough, not defective. [px]
     margin : float
@@ -132,26 +137,60 @@ def find_defects(
     An open is bare web that joins both sides of a line, a bridge is ink that joins two lines: both are judged on
     the whole mask around the finding, so a film of half contrast or a crack much finer than the blur isn't seen.
     """
-    height, width = ink.shape
-    core, gaps = np.zeros_like(ink), np.zeros_like(ink)
+    drawn = np.zeros_like(ink)
     for k in range(len(left)):
-        _fill(core, left[k] + slack[k, 0], right[k] - slack[k, 1])
-    edges = [(left[0] - slack[0, 0] - margin, left[0] - slack[0, 0])]
-    edges += [
-        (right[k] + slack[k, 1], left[k + 1] - slack[k + 1, 0]) for k in range(len(left) - 1)
-    ]
-    edges.append((right[-1] + slack[-1, 1], right[-1] + slack[-1, 1] + margin))
-    for a, b in edges:
-        _fill(gaps, a, b)
+        _fill(drawn, left[k] - slack[k, 0], right[k] + slack[k, 1])
+    far = np.full(left.shape[1], float(ink.shape[1]))
+    _fill(drawn, -far, left[0] - slack[0, 0] - margin)
+    _fill(drawn, right[-1] + slack[-1, 1] + margin, far)
+    excess = cv2.compare(ink, drawn, cv2.CMP_GT)
+    drawn[:] = 0
+    for k in range(len(left)):
+        _fill(drawn, np.where(way[k], left[k] + slack[k, 0], np.nan), right[k] - slack[k, 1])
+    bare = cv2.compare(drawn, ink, cv2.CMP_GT)
+    del drawn
     found: list[Defect] = []
-    bare = cv2.bitwise_and(core, cv2.bitwise_not(ink))
-    excess = cv2.bitwise_and(gaps, ink)
-    del core, gaps
     for mask, missing in ((bare, True), (excess, False)):
         for box, inside in _components(mask, least_area):
             look = _Look(ink, left, right, slack, box, inside, missing=missing)
             found.append(look.defect())
     return sorted(found, key=lambda d: (d.rows[0], d.x))
+
+
+def smooth_course(edge: NDArray[np.float64], coarse: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the course that an edge keeps but for its roughness and defects.
+
+    Parameters
+    ----------
+    edge : ndarray of float, shape (M,)
+        Column of the edge in each row; NaN where not measured. [px]
+    coarse : ndarray of float, shape (M,)
+        Course to keep beyond what was measured. [px]
+
+    Returns
+    -------
+    ndarray of float, shape (M,)
+        A robust cubic through the edge. [px]
+    """
+    known = np.nonzero(np.isfinite(edge))[0]
+    if len(known) < _FEWEST_ROWS:
+        return coarse
+    rows = known[:: max(1, len(known) // _COURSE_ROWS)]
+    scale = 2.0 / max(len(edge) - 1, 1)
+    basis = np.polynomial.legendre.legvander(rows * scale - 1.0, 3)
+    y = edge[rows]
+    weight = np.ones(len(rows))
+    fit = np.zeros(4)
+    for terms in (2, 2, 4, 4):
+        part = basis[:, :terms]
+        fit = np.zeros(4)
+        fit[:terms] = np.linalg.solve((part.T * weight) @ part + 1e-9 * np.eye(terms), part.T @ (weight * y))
+        off = np.abs(y - basis @ fit)
+        weight = (off <= _OUTLIER * float(np.median(off)) + 1e-6).astype(np.float64)
+    course = coarse.copy()
+    inner = np.arange(known[0], known[-1] + 1)  # beyond what was measured a cubic runs wild
+    course[inner] = np.polynomial.legendre.legval(inner * scale - 1.0, fit)
+    return course
 
 
 def _fill(mask: NDArray[Any], a: NDArray[np.float64], b: NDArray[np.float64]) -> None:
@@ -196,8 +235,7 @@ class _Look:
         middle = y + int(np.median(counts))
         at = float(np.median(columns))
         if missing:
-            centres = np.where(np.isfinite(left[:, middle]), (left[:, middle] + right[:, middle]) / 2, np.inf)
-            self.line = int(np.argmin(np.abs(centres - at)))
+            self.line = int(np.argmin(np.abs((left[:, middle] + right[:, middle]) / 2 - at)))
             k = self.line
             near, far = left[k, rows], right[k, rows]
             a, b = near - slack[k, 0] - 1, far + slack[k, 1] + 1
@@ -209,8 +247,8 @@ class _Look:
             a = near - slack[k, 1] - 1 if k >= 0 else near
             b = far + slack[k + 1, 0] + 1 if k + 1 < len(left) else far
         # What it joins is judged in its own rows only, so that nothing is joined around its ends.
-        low = int(np.clip(np.nanmin(np.where(np.isfinite(a), a, x - 2)) - 1, 0, ink.shape[1] - 1))
-        high = int(np.clip(np.nanmax(np.where(np.isfinite(b), b, x + w + 2)) + 2, low + 1, ink.shape[1]))
+        low = int(np.clip(np.where(np.isfinite(a), a, x - 2).min() - 1, 0, ink.shape[1] - 1))
+        high = int(np.clip(np.where(np.isfinite(b), b, x + w + 2).max() + 2, low + 1, ink.shape[1]))
         low, high = min(low, x), max(high, x + w)
         part = ink[y : y + h, low:high] == 0 if missing else ink[y : y + h, low:high] > 0
         _, labels = cv2.connectedComponents(part.astype(np.uint8), connectivity=4 if missing else 8)

@@ -59,8 +59,8 @@ def position_bound(blur_px: float, contrast: float, noise: float) -> float:
     return math.sqrt(2.0 * math.sqrt(math.pi) * blur_px) * noise / contrast
 
 
-def first_crossing(rows: NDArray[np.float32], low: float, high: float) -> NDArray[np.float64]:
-    """Return where each row steps from `low` to `high`.
+def first_crossing(rows: NDArray[np.float32], levels: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return where each row steps from one level to the other.
 
     The sum of differences to mid-level is least there: the maximum-likelihood place of a sharp step in white
     noise, so it holds where a threshold would cross many times. The crossing is then interpolated.
@@ -69,7 +69,7 @@ def first_crossing(rows: NDArray[np.float32], low: float, high: float) -> NDArra
     ----------
     rows : ndarray of float32, shape (M, N)
         Pixels across the edge. [counts]
-    low, high : float
+    levels : ndarray of float, shape (M, 2)
         Levels left and right of it. [counts]
 
     Returns
@@ -77,7 +77,8 @@ def first_crossing(rows: NDArray[np.float32], low: float, high: float) -> NDArra
     ndarray of float, shape (M,)
         Column. [px]
     """
-    above = (rows - np.float32(0.5 * (low + high))) * np.float32(1.0 if high > low else -1.0)
+    middle = levels.mean(axis=1).astype(np.float32)
+    above = (rows - middle[:, None]) * np.where(levels[:, 1] > levels[:, 0], np.float32(1), np.float32(-1))[:, None]
     last = np.argmin(np.cumsum(above, axis=1), axis=1)
     each = np.arange(len(rows))
     before, after = above[each, last], above[each, np.minimum(last + 1, rows.shape[1] - 1)]

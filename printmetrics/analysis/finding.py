@@ -13,13 +13,15 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 MAX_TILT_DEG = 30.0
-_BANDS, _BAND_ROWS = 8, 12  # the direction is taken from this much of a large picture
-_BLOCKS = 64  # so many blocks along the lines, where there are rows enough
-_BLOCK_ROWS = 2, 32
+_BAND_ROWS, _BANDS, _BAND_PIXELS = 10, (4, 32), 200_000  # the direction is taken from this much of a large picture
+_SPREAD_DEG = 8  # a line that wanders shows its course in a range of angles
+_BLOCKS = 48  # so many blocks along the lines, where there are rows enough
+_BLOCK_ROWS = 2, 64
 _ROWS_USED = 8  # of each block, enough to lift a line out of the noise
 SMOOTH_PX = (1.0, 3.0)  # the second is tried where the first finds nothing: strong blur in strong noise
 _NOISE_SIGMAS = 6.0  # a step counts when it stands out of the noise by this much
 _RELATIVE_STEP = 0.12  # and is at least this part of the picture's strong steps
+_FOLLOW = 0.3  # how fast a chain follows a line that wanders
 _COVERED = 0.4  # a line shows its edges over at least this part of its way through the region
 
 
@@ -84,17 +86,18 @@ def find_direction(image: NDArray[Any], *, vertical: bool | None = None, smooth:
     for axis in (0, 1):
         size = image.shape[axis]
         band = min(round(_BAND_ROWS * smooth), size)
-        for start in np.unique(np.linspace(0, size - band, _BANDS).astype(int)):
+        count = min(max(_BAND_PIXELS // (band * image.shape[1 - axis]), _BANDS[0]), _BANDS[1])
+        for start in np.unique(np.linspace(0, size - band, count).astype(int)):
             part = image[start : start + band] if axis == 0 else image[:, start : start + band]
             votes += _angle_votes(np.ascontiguousarray(part, dtype=np.float32), smooth)
-    votes = sum(np.roll(votes, k) for k in range(-2, 3))  # type: ignore[assignment]
+    votes = np.asarray(sum(np.roll(votes, k) for k in range(-_SPREAD_DEG // 2, _SPREAD_DEG // 2 + 1)))
     reach = round(MAX_TILT_DEG) + 2
     near = np.arange(-reach, reach + 1)
     strength = {True: votes[near % 180], False: votes[(near + 90) % 180]}
     best = {key: float(value.max()) for key, value in strength.items()}
     upright = best[True] >= best[False] if vertical is None else vertical
     peak = int(np.argmax(strength[upright]))
-    around = np.arange(max(peak - 4, 0), min(peak + 5, len(near)))
+    around = np.arange(max(peak - _SPREAD_DEG, 0), min(peak + _SPREAD_DEG + 1, len(near)))
     floor = float(np.median(strength[upright]))
     weight = np.maximum(strength[upright][around] - floor, 0.0)
     angle = float(np.sum(weight * near[around]) / max(weight.sum(), 1e-30)) if weight.any() else 0.0
@@ -203,25 +206,22 @@ def _pieces(profiles: NDArray[np.float32], scale: float, *, bright: bool) -> lis
     peak = np.zeros(step.shape, bool)
     middle = size[:, 1:-1]
     peak[:, 1:-1] = (middle > size[:, :-2]) & (middle >= size[:, 2:]) & (middle > least)
-    found = []
-    for b in range(len(profiles)):
-        at = np.nonzero(peak[b])[0]
-        sign = np.sign(step[b, at])
-        amount = size[b, at]
-        before, here, after = size[b, at - 1], size[b, at], size[b, at + 1]
-        place = at + 0.5 * (before - after) / np.minimum(before - 2 * here + after, -1e-12)
-        # Of several steps of one sign in a row the strongest stands for them.
-        keep = np.ones(len(at), bool)
-        first = 0
-        for k in range(1, len(at) + 1):
-            if k == len(at) or sign[k] != sign[first]:
-                keep[first:k] = False
-                keep[first + int(np.argmax(amount[first:k]))] = True
-                first = k
-        place, sign = place[keep], sign[keep]
-        left = np.nonzero((sign[:-1] > 0) & (sign[1:] < 0))[0]
-        found.append(np.column_stack([place[left], place[left + 1]]))
-    return found
+    b, at = np.nonzero(peak)
+    if not len(b):
+        return [np.empty((0, 2)) for _ in profiles]
+    before, here, after = size[b, at - 1], size[b, at], size[b, at + 1]
+    place = at + 0.5 * (before - after) / np.minimum(before - 2 * here + after, -1e-12)
+    sign = step[b, at] > 0
+    # Of several steps of one sign in a row the strongest stands for them.
+    new = np.concatenate([[True], (b[1:] != b[:-1]) | (sign[1:] != sign[:-1])])
+    run = np.cumsum(new) - 1
+    order = np.lexsort((here, run))
+    last = np.concatenate([run[order][1:] != run[order][:-1], [True]])
+    best = order[last]
+    b, place, sign = b[best], place[best], sign[best]
+    left = np.nonzero((b[:-1] == b[1:]) & sign[:-1] & ~sign[1:])[0]
+    pairs = np.column_stack([place[left], place[left + 1]])
+    return np.split(pairs, np.searchsorted(b[left], np.arange(1, len(profiles))))
 
 
 def _step_noise(scale: float) -> float:
@@ -233,12 +233,14 @@ def _step_noise(scale: float) -> float:
 class _Chain:
     """Pieces of successive blocks that belong together, with the edges expected next."""
 
-    def __init__(self, row: float, edges: NDArray[np.float64]) -> None:
+    def __init__(self, row: float, edges: NDArray[np.float64], slope: float) -> None:
         self.rows = [row]
         self.edges = [edges]
         self.tip = edges
+        self.slope = slope
 
     def add(self, row: float, edges: NDArray[np.float64], expected: NDArray[np.float64]) -> None:
+        self.slope += _FOLLOW * float((edges - expected).mean()) / (row - self.rows[-1])
         self.rows.append(row)
         self.edges.append(edges)
         self.tip = 0.5 * (expected + edges)
@@ -250,12 +252,11 @@ class _Chain:
         return np.asarray(np.median(edges + slope * (row - rows)[:, None], axis=0))
 
 
-def _same(expected: NDArray[np.float64], seen: NDArray[np.float64], slack: float) -> NDArray[np.float64]:
-    """Return how far each piece is from where a line is expected; infinite where it can't be that line."""
-    width = expected[1] - expected[0]
-    off = np.abs(seen - expected)
-    worst = np.maximum(off[:, 0], off[:, 1])
-    return np.where(worst <= min(slack + 0.15 * width, 0.5 * width + 1.5), worst, np.inf)
+def _distance(expected: NDArray[np.float64], seen: NDArray[np.float64], slack: float) -> NDArray[np.float64]:
+    """Return how far each piece is from each line expected; infinite where it can't be that line."""
+    width = expected[:, 1] - expected[:, 0]
+    worst = np.abs(seen - expected[:, None]).max(axis=2)
+    return np.where(worst <= np.minimum(slack + 0.15 * width, 0.5 * width + 1.5)[:, None], worst, np.inf)
 
 
 def _chains(pieces: list[NDArray[np.float64]], centre: NDArray[np.float64], slope: float) -> list[_Chain]:
@@ -265,18 +266,22 @@ def _chains(pieces: list[NDArray[np.float64]], centre: NDArray[np.float64], slop
     for row, seen in zip(centre.tolist(), pieces, strict=True):
         free = np.ones(len(seen), bool)
         going = []
-        for chain in live:
-            expected = chain.tip + slope * (row - chain.rows[-1])
-            distance = np.where(free, _same(expected, seen, 2.0), np.inf)
-            best = int(distance.argmin()) if len(seen) else -1
-            if best >= 0 and distance[best] < np.inf:
-                free[best] = False
-                chain.add(row, seen[best], expected)
-                going.append(chain)
-            else:
-                done.append(chain)
-        going += [_Chain(row, piece) for piece in seen[free]]
-        live = going
+        if live and len(seen):
+            ahead = np.array([[c.slope * (row - c.rows[-1])] for c in live])
+            expected = np.array([c.tip for c in live]) + ahead
+            distance = _distance(expected, seen, 2.0)
+            nearest = distance.argmin(axis=1).tolist()
+            least = distance.min(axis=1)
+            for k in np.argsort(least, kind="stable").tolist():
+                if least[k] < np.inf and free[nearest[k]]:
+                    free[nearest[k]] = False
+                    live[k].add(row, seen[nearest[k]], expected[k])
+                    going.append(live[k])
+                else:
+                    done.append(live[k])
+        else:
+            done += live
+        live = going + [_Chain(row, piece, slope) for piece in seen[free]]
     return [c for c in done + live if len(c.rows) > 1]
 
 
@@ -292,7 +297,7 @@ def _join(chains: list[_Chain], slope: float) -> list[CoarseLine]:
             own = _course(line, slope)
             expected = line.end(chain.rows[0], own, first=False)
             begin = chain.end(chain.rows[0], slope, first=True)
-            distance = float(_same(expected, begin[None], 2.5 + 0.02 * gap)[0])
+            distance = float(_distance(expected[None], begin[None], 2.5 + 0.02 * gap)[0, 0])
             if distance < least:
                 best, least = line, distance
         if best is None:

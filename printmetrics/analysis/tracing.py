@@ -19,7 +19,8 @@ if TYPE_CHECKING:
     from printmetrics.analysis.finding import CoarseLine
 
 _APART = 8.0  # blurs between two edges from which on each is fitted alone
-_SEARCH_PX = 10  # a rough edge is looked for this far, plus 4 blurs, beside its coarse course
+_SEARCH_PX, _SEARCH_MOST = 6, 100  # a rough edge is looked for this far, plus 3 blurs, beside its coarse course,
+_AT_END = 0.003  # and further where more than this part of it is found at the ends
 _KNOWN_BLUR = 5.0  # narrower than this many blurs, a line takes its blur from wider ones where there are any
 _PASSES = 5  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
@@ -151,33 +152,55 @@ class _Tracer:
             float(np.median(self.image[rows, np.clip(np.rint(p), 0, self.width - 1).astype(int)])) for p in places
         ])
 
-    def _search(self, k: int, side: int, blur: float, every: int = 1) -> tuple[_Cut, NDArray[np.float64]]:
-        """Pixels around a coarse edge, and the edge to a pixel."""
-        far = math.ceil(4 * blur + _SEARCH_PX)
-        inner = max(2, min(far, round(self.line_width[k] / 2)))
-        outer = max(2, min(far, round(self.space[k, side] / 2)))
-        before, after = (outer, inner) if side == 0 else (inner, outer)
-        centre = self.course[k, side]
-        rows = np.nonzero((centre > 1) & (centre < self.width - 2))[0][::every]
-        first = np.rint(centre[rows]).astype(np.intp) - before
-        n = min(before + after + 1, self.width)
-        first = np.clip(first, 0, self.width - n)
-        pixels = gather(self.image, rows, first, n)
-        low, high = self.levels[k][side : side + 2]
-        start = first_crossing(pixels, float(low), float(high))
-        return _Cut(((k, side),), ((k, side),), rows, first, pixels), start
+    def _search(self, blur: float, only: tuple[int, int] | None = None, every: int = 1) -> NDArray[np.float64]:
+        """Return all edges, or only one, to a fraction of a pixel, by their first crossing beside the coarse course."""
+        edges = np.full_like(self.course, np.nan)
+        todo = {edge: math.ceil(3 * blur) + _SEARCH_PX for edge in np.ndindex(edges.shape[:2]) if only in (None, edge)}
+        while todo:
+            alike: dict[tuple[int, int], list[tuple[int, int]]] = {}
+            for (k, side), far in todo.items():
+                inner = max(2, min(far, round(self.line_width[k] / 2)))
+                outer = max(2, min(far, round(self.space[k, side] / 2)))
+                alike.setdefault((outer, inner) if side == 0 else (inner, outer), []).append((k, side))
+            again = {}
+            for (before, after), group in alike.items():
+                n = min(before + after + 1, self.width)
+                rows, first = [], []
+                for edge in group:
+                    start = np.rint(self.course[edge]).astype(np.intp) - before
+                    # Too near the border to look around, the coarse course is the first guess.
+                    edges[edge] = np.where((start > -before) & (start < self.width - before), self.course[edge], np.nan)
+                    rows.append(np.nonzero((start >= 0) & (start <= self.width - n))[0][::every])
+                    first.append(start[rows[-1]])
+                size = [len(r) for r in rows]
+                levels = np.array([self.levels[k][side : side + 2] for k, side in group])
+                pixels = gather(self.image, np.concatenate(rows), np.concatenate(first), n)
+                found = np.split(first_crossing(pixels, np.repeat(levels, size, axis=0)), np.cumsum(size)[:-1])
+                for edge, r, f, x in zip(group, rows, first, found, strict=True):
+                    edges[edge][r] = f + x
+                    # A very rough edge strays to the ends of where it was looked for.
+                    at_end = float(np.mean((x < 1) | (x > n - 3))) if len(x) else 0.0
+                    if at_end > _AT_END and todo[edge] < _SEARCH_MOST:
+                        again[edge] = 2 * todo[edge]
+            todo = {e: far for e, far in again.items() if self._room(e) > todo[e]}
+        return edges
+
+    def _room(self, edge: tuple[int, int]) -> float:
+        return max(self.line_width[edge[0]], float(self.space[edge])) / 2
 
     def _first_blur(self) -> float:
         """Blur from the mean profile of the widest line's edge, aligned to a pixel."""
         k = int(np.argmax(self.line_width))
         guess = 2.0
         for _ in range(3):
-            window, start = self._search(k, 0, guess, every=max(1, len(self.all_rows) // _SHAPE_ROWS))
-            use = self.usable[k][window.rows]
-            if not use.any():
+            x = self._search(guess, (k, 0), max(1, len(self.all_rows) // _SHAPE_ROWS))[k, 0]
+            rows = np.nonzero(np.isfinite(x) & self.usable[k])[0]
+            if not len(rows):
                 return guess
-            pixels, start = window.pixels[use], start[use]
-            offset = np.rint(np.arange(pixels.shape[1]) - start[:, None] + 0.5).astype(int)
+            n = min(2 * math.ceil(4 * guess + 4) + 1, self.width)
+            first = np.clip(np.rint(x[rows]).astype(np.intp) - n // 2, 0, self.width - n)
+            pixels = gather(self.image, rows, first, n)
+            offset = np.rint(np.arange(n) + (first - x[rows])[:, None]).astype(int)
             base = offset.min()
             count = np.bincount((offset - base).ravel())
             mean = np.bincount((offset - base).ravel(), weights=pixels.ravel()) / np.maximum(count, 1)
@@ -212,11 +235,7 @@ class _Tracer:
     def traces(self) -> list[Trace | None]:
         """Fit all lines until the windows suit the blur: first those wide enough to tell it, then the narrow ones."""
         lines = range(len(self.course))
-        edges = np.full_like(self.course, np.nan)
-        for k in lines:
-            for side in (0, 1):
-                window, start = self._search(k, side, self.blur)
-                edges[k, side, window.rows] = window.first + start
+        edges = self._search(self.blur)
         fits: list[list[_Cut]] = [[] for _ in lines]
         blurs = np.full((len(self.course), 2), np.nan)
         due = set(lines)

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import ndtri
 
-from printmetrics.analysis.roughness import Process, Roughness, amplitude_filter, fit_spectrum, u_mean, unbiased_sd
+from printmetrics.analysis.roughness import Process, amplitude_filter, fit_spectrum, u_mean, unbiased_sd
 from printmetrics.errors import FeatureError
 from printmetrics.flags import Flag
 from printmetrics.measure.lines.geometry import Straightened, slope_of, straighten
@@ -191,7 +191,9 @@ def _fit(
     if line_removed:
         place = np.arange(len(part), dtype=np.float64)
         good = np.isfinite(part)
-        part = part - np.polyval(np.polyfit(place[good], part[good], 1), place)
+        middle = place[good].mean()
+        slope = (place[good] - middle) @ part[good] / max(float(((place[good] - middle) ** 2).sum()), 1e-30)
+        part = part - part[good].mean() - slope * (place - middle)
     try:
         return fit_spectrum(
             part, step, blur=blur, noise_expected=max(noise, 1e-12), noise_multiplicity=points,
@@ -281,6 +283,7 @@ class _LineReadings:
         self.mid_mean = float(np.nanmean(self.width))
         self.mean = self.mid_mean + line.level_shift
         self.readings: list[Reading] = []
+        self.rough = unbiased_sd(self.width, line.width) if line.width is not None else None
         self.rough_flags = self._rough_flags()
         names = [d for d in seen.defects if d.kind in ("open", "neck", "void")]
         own = [d for d in names if seen.names[d.line] == line.name]
@@ -386,46 +389,37 @@ class _LineReadings:
             self.add("width_harmonic", None, flags=flags | Flag.OUTSIDE_VALIDITY)
         else:
             value = 1.0 / float(np.mean(1.0 / local))
-            u_spread = 0.0
-            if line.width is not None:
-                rough = unbiased_sd(self.width, line.width)
-                u_spread = 2.0 * rough.sd * rough.u_noise / self.mean
+            u_spread = 2.0 * self.rough.sd * self.rough.u_noise / self.mean if self.rough is not None else 0.0
             noise = math.hypot(mean_noise, u_spread)
             dof = effective_dof([(noise, math.inf), (sampling or 0.0, sampling_dof)])
             self.add("width_harmonic", value, noise=noise, sampling=sampling, model=shape, dof=dof, flags=flags | doubt)
 
     def _roughness(self) -> None:
         line, straight = self.line, self.line.straight
-        for prefix, raw_name, values, process in (
-            ("lwr_3sigma", "lwr_3sigma_raw", straight.width, line.width),
-            ("ler_left_3sigma", "ler_left_3sigma_raw", straight.left, line.left),
-            ("ler_right_3sigma", "ler_right_3sigma_raw", straight.right, line.right),
+        for prefix, values, process in (
+            ("lwr", straight.width, line.width), ("ler_left", straight.left, line.left),
+            ("ler_right", straight.right, line.right),
         ):
-            raw = _sd(values, line_removed=prefix != "lwr_3sigma")
+            side = prefix.removeprefix("ler_") if prefix != "lwr" else ""
             if process is None:
-                self.add(prefix, None, flags=self.rough_flags | Flag.SHORT_SAMPLING)
-                self.add(raw_name, 3 * raw, flags=self.rough_flags)
+                raw = _sd(values, line_removed=bool(side))
+                self.add(f"{prefix}_3sigma", None, flags=self.rough_flags | Flag.SHORT_SAMPLING)
+                self.add(f"{prefix}_3sigma_raw", 3 * raw, flags=self.rough_flags)
+                if side:
+                    self.add(f"raggedness_{side}", raw, flags=self.rough_flags)
                 continue
-            rough: Roughness = unbiased_sd(values, process)
-            dof = rough.sd**2 / (2.0 * rough.u_sampling**2) * 1.0 if rough.u_sampling > 0 else math.inf
-            self.add(
-                prefix, 3 * rough.sd, noise=3 * rough.u_noise, sampling=3 * rough.u_sampling,
-                dof=max(dof, 1.0), flags=self.rough_flags,
-            )
-            self.add(
-                raw_name, 3 * raw, noise=3 * rough.u_noise * rough.sd / max(raw, 1e-30),
-                sampling=3 * rough.u_sampling * rough.sd / max(raw, 1e-30), dof=max(dof, 1.0), flags=self.rough_flags,
-            )
-        for name, values, process in (
-            ("raggedness_left", straight.left, line.left), ("raggedness_right", straight.right, line.right)
-        ):
-            raw = _sd(values, line_removed=True)
-            if process is None:
-                self.add(name, raw, flags=self.rough_flags)
-                continue
-            rough = unbiased_sd(values, process)
-            share = rough.sd / max(raw, 1e-30)
-            self.add(name, raw, noise=rough.u_noise * share, sampling=rough.u_sampling * share, flags=self.rough_flags)
+            rough = self.rough if not side else unbiased_sd(values, process)
+            assert rough is not None
+            dof = max(rough.sd**2 / (2.0 * rough.u_sampling**2), 1.0) if rough.u_sampling > 0 else math.inf
+            u = {"noise": rough.u_noise, "sampling": rough.u_sampling}
+            # What is known of the true scatter, carried over to the scatter as seen.
+            share = rough.sd / max(rough.raw, 1e-30)
+            seen = {name: value * share for name, value in u.items()}
+            common = {"dof": dof, "flags": self.rough_flags}
+            self.add(f"{prefix}_3sigma", 3 * rough.sd, **{n: 3 * v for n, v in u.items()}, **common)  # type: ignore[arg-type]
+            self.add(f"{prefix}_3sigma_raw", 3 * rough.raw, **{n: 3 * v for n, v in seen.items()}, **common)  # type: ignore[arg-type]
+            if side:
+                self.add(f"raggedness_{side}", rough.raw, **seen, **common)  # type: ignore[arg-type]
 
     def _process(self) -> None:
         """Figures of the fitted process; withheld where the line is too short, or too smooth, to tell them."""

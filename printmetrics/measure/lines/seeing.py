@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import cv2
 import numpy as np
 
-from printmetrics.analysis.defects import Defect, find_defects, ink_mask, smoothing
+from printmetrics.analysis.defects import Defect, find_defects, ink_mask, smooth_course, smoothing
 from printmetrics.analysis.edges import window_half
 from printmetrics.analysis.finding import MAX_TILT_DEG, SMOOTH_PX, CoarseLine, Direction, find_direction, find_lines
 from printmetrics.analysis.tracing import Trace, trace_lines
@@ -106,8 +106,9 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
         raise _nothing(part, options, "no line was found")
     traces = [trace for _, trace in traced]
     names = _names(traces, direction, origin, sight, options)
-    ink, slack = _ink(image, traces, bright=options.ink == "bright")
-    defects, hit = _defects(ink, slack, traces, [line for line, _ in traced])
+    course = np.array([[smooth_course(t.edges[side], t.course[side]) for side in (0, 1)] for t in traces])
+    ink = _ink(image, traces, bright=options.ink == "bright")
+    defects, hit = _defects(ink, course, traces)
     return Seen(
         direction=direction, origin=origin, image=image, saturated=saturated, names=names, traces=traces,
         defects=defects, hit=hit, ink=ink, count=len(traces), expected=expected,
@@ -212,8 +213,8 @@ def _names(
     return names
 
 
-def _ink(image: NDArray[Any], traces: list[Trace], *, bright: bool) -> tuple[NDArray[Any], NDArray[np.float64]]:
-    """Return where ink is seen, and how far rough edges may stray from their course."""
+def _ink(image: NDArray[Any], traces: list[Trace], *, bright: bool) -> NDArray[Any]:
+    """Return where ink is seen."""
     contrast = float(np.median([t.contrast for t in traces]))
     smooth = smoothing(contrast, float(np.median([t.noise for t in traces])))
     levels = [(t.ink + t.bare) / 2 for t in traces]
@@ -221,17 +222,22 @@ def _ink(image: NDArray[Any], traces: list[Trace], *, bright: bool) -> tuple[NDA
     threshold: float | NDArray[np.float32] = float(np.median(levels))
     if uneven:
         threshold = _threshold_map(image.shape, traces)
+    return ink_mask(image, threshold, smooth, bright=bright)
+
+
+def _slack(course: NDArray[np.float64], traces: list[Trace]) -> NDArray[np.float64]:
+    """How far rough edges may stray from their course, shape (K, 2)."""
     slack = np.empty((len(traces), 2))
     for k, trace in enumerate(traces):
         for side in (0, 1):
-            off = trace.edges[side] - _smooth_course(trace, side)
-            sd = 1.4826 * float(np.nanmedian(np.abs(off)))
+            off = np.abs(trace.edges[side] - course[k, side])
+            sd = 1.4826 * float(np.median(off[np.isfinite(off)]))
             slack[k, side] = max(2.0, 1.5 * float(trace.blur[side]), _SLACK_SD * sd)
-        slack[k] = np.minimum(slack[k], trace.width / 3)
+        slack[k] = np.minimum(slack[k], float(np.median(course[k, 1] - course[k, 0])) / 3)
     for k in range(len(traces) - 1):
-        space = float(np.nanmedian(traces[k + 1].course[0] - traces[k].course[1]))
+        space = max(float(np.median(course[k + 1, 0] - course[k, 1])), 0.0)
         slack[k, 1], slack[k + 1, 0] = min(slack[k, 1], space / 3), min(slack[k + 1, 0], space / 3)
-    return ink_mask(image, threshold, smooth, bright=bright), slack
+    return slack
 
 
 def _threshold_map(shape: tuple[int, ...], traces: list[Trace]) -> NDArray[np.float32]:
@@ -248,41 +254,18 @@ def _threshold_map(shape: tuple[int, ...], traces: list[Trace]) -> NDArray[np.fl
     return np.array([np.interp(columns, at[:, r], value[:, r]) for r in range(len(rows))], dtype=np.float32)
 
 
-def _smooth_course(trace: Trace, side: int) -> NDArray[np.float64]:
-    """A cubic through the edge, robust against defects: what is rough about it is not its course."""
-    height = trace.edges.shape[1]
-    rows = np.linspace(-1, 1, height)
-    step = max(1, height // 512)
-    y, x = trace.edges[side, ::step], rows[::step]
-    good = np.isfinite(y)
-    if good.sum() < 8:  # noqa: PLR2004  (a cubic and its scatter need more)
-        return trace.course[side]
-    fit = np.polyfit(x[good], y[good], 1)
-    for degree in (1, 3, 3):
-        off = np.abs(y - np.polyval(fit, x))
-        good = np.isfinite(y) & (off <= 3.5 * 1.4826 * np.nanmedian(off) + 1e-6)
-        if good.sum() < 8:  # noqa: PLR2004
-            break
-        fit = np.polyfit(x[good], y[good], degree)
-    course = np.polyval(fit, rows)
-    # Beyond what was measured a cubic runs wild.
-    seen = np.nonzero(np.isfinite(trace.edges[side]))[0]
-    course[: seen[0]] = trace.course[side, : seen[0]]
-    course[seen[-1] + 1 :] = trace.course[side, seen[-1] + 1 :]
-    return course
-
-
 def _defects(
-    ink: NDArray[Any], slack: NDArray[np.float64], traces: list[Trace], lines: list[CoarseLine]
+    ink: NDArray[Any], course: NDArray[np.float64], traces: list[Trace]
 ) -> tuple[list[Defect], NDArray[np.bool_]]:
-    del lines
-    left = np.array([np.where(t.way, _smooth_course(t, 0), np.nan) for t in traces])
-    right = np.array([np.where(t.way, _smooth_course(t, 1), np.nan) for t in traces])
-    width = float(np.median([t.width for t in traces]))
-    space = [float(np.nanmedian(left[k + 1] - right[k])) for k in range(len(traces) - 1)]
+    """Find defects, and the rows of each line that they spoil."""
+    way = np.array([t.way for t in traces])
+    left, right = course[:, 0], course[:, 1]
+    slack = _slack(course, traces)
+    width = float(np.median(course[:, 1] - course[:, 0]))
+    space = [float(np.median(course[k + 1, 0] - course[k, 1])) for k in range(len(traces) - 1)]
     blur = float(np.median([t.blur.mean() for t in traces]))
-    margin = min([*space, 2 * width])
-    found = find_defects(ink, left, right, slack, margin, max(6.0, 2.5 * blur * blur))
+    margin = max(min([*space, 2 * width]), 0.0)
+    found = find_defects(ink, left, right, way, slack, margin, max(6.0, 2.5 * blur * blur))
     hit = np.zeros((len(traces), ink.shape[0]), bool)
     for defect in found:
         reach = window_half(blur)
@@ -306,6 +289,6 @@ def _concerned(
         if not 0 <= k < len(left):
             continue
         gap = defect.outline[:, 0] - right[k, rows] if k == defect.line else left[k, rows] - defect.outline[:, 0]
-        if (defect.left if k == defect.line else defect.right) or float(np.nanmin(gap)) < reach:
+        if (defect.left if k == defect.line else defect.right) or float(gap.min()) < reach:
             near.append(k)
     return near
