@@ -114,7 +114,7 @@ def inspect_picture(picture: Picture, recipe: Recipe, captured_at: str = "") -> 
         result.rows.extend(_row(reading, options, recipe, doubt) for reading in measured.readings)
         result.events.extend(_event_row(event, options, recipe, scale) for event in measured.events)
         result.profiles.extend((options.name, profile) for profile in measured.profiles)
-        result.shapes.extend((options.name, shape) for shape in measured.shapes)
+        result.shapes.extend((options.name, shape) for shape in [*_region_shape(options, scale), *measured.shapes])
     if not result.failures:
         return result
     reason = "; ".join(f"{name}: {why}" for name, why in result.failures.items())
@@ -258,6 +258,14 @@ def _check_region(options: FeatureOptions, sight: Sight) -> None:
         f"({width} x {height} px); correct region or scale in the recipe"
     )
     raise FeatureError(msg)
+
+
+def _region_shape(options: FeatureOptions, scale: Scale) -> list[Shape]:
+    if options.region is None:
+        return []
+    x, y, w, h = options.region
+    corners = [(x, y), (x + w, y), (x + w, y + h), (x, y + h), (x, y)]
+    return [Shape(item=ALL, role="region", points_px=scale.to_px(corners))]
 
 
 def _row(reading: Reading, options: FeatureOptions, recipe: Recipe, doubt: Flag) -> Row:

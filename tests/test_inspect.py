@@ -246,6 +246,14 @@ def test_region_as_large_as_the_picture_is_inside(
     assert not inspect_picture(_picture(), recipe(feature="region = [0, 0, 50, 40]")).failures
 
 
+def test_region_is_drawn_where_it_lies(monkeypatch: pytest.MonkeyPatch, recipe: Callable[..., Recipe]) -> None:
+    _pretend(monkeypatch, _gives(), {})
+    ((feature, shape),) = inspect_picture(_picture(), recipe(feature="region = [10, 5, 20, 30]")).shapes
+    assert (feature, shape.role) == ("bus", "region")
+    assert shape.points_px.min(axis=0).tolist() == [20.0, 10.0]
+    assert shape.points_px.max(axis=0).tolist() == [60.0, 70.0]
+
+
 @pytest.mark.parametrize(
     ("machine", "cross", "md", "cd"),
     [("+y", "+x", 20.0, 5.0), ("-y", "-x", -20.0, -5.0), ("+x", "-y", 5.0, -20.0), ("-x", "+y", -5.0, 20.0)],

@@ -34,6 +34,7 @@ WHITE: Colour = (255, 255, 255)
 GREY: Colour = (185, 185, 185)
 BAND: Colour = (38, 34, 32)
 LEFT_OUT: Colour = (90, 240, 240)
+REGION: Colour = (120, 120, 120)
 # BGR. Blue, orange and magenta differ in lightness too, so they stay apart for colour-blind eyes and in grey print.
 STYLE: dict[str, tuple[str, Colour]] = {
     "nonconforming": ("X", (200, 60, 255)),
@@ -187,12 +188,12 @@ def _by_item(inspection: Inspection) -> dict[tuple[str, str], list[dict[str, Any
 def _draw_shapes(canvas: NDArray[np.uint8], inspection: Inspection, place: _Place, text: float) -> None:
     items = _by_item(inspection)
     thick = 2 if max(canvas.shape) > 1500 else 1  # noqa: PLR2004  (a hair line vanishes on a large drawing)
-    for role in ("edge", "left_out", "event"):
+    for role in ("region", "edge", "left_out", "event"):
         for feature, shape in inspection.shapes:
-            if shape.role != role:
+            if shape.role.partition(":")[0] != role:
                 continue
             verdict_colour = STYLE[_worst(items.get((feature, shape.item), []))][1]
-            colour = {"edge": verdict_colour, "left_out": LEFT_OUT, "event": WHITE}[role]
+            colour = {"region": REGION, "edge": verdict_colour, "left_out": LEFT_OUT, "event": WHITE}[role]
             points = place(shape.points_px)
             if role == "event":
                 _polyline(canvas, points, (0, 0, 0), thick + 2)
@@ -206,7 +207,7 @@ def _draw_shapes(canvas: NDArray[np.uint8], inspection: Inspection, place: _Plac
 def _event_name(
     canvas: NDArray[np.uint8], event: dict[str, Any], centre: NDArray[np.float64], scale: float, taken: list[Box]
 ) -> None:
-    """Write an event's name in a box near it, where no other name stands, tied to it by a line."""
+    """Write an event's name in a box near it, where no other name stands; tied to it by a line if farther off."""
     label = f"{event['item']} {event['event']}"
     width, height = _extent(label, scale)
     away = 14 * scale / 0.42
@@ -216,7 +217,7 @@ def _event_name(
         (x + away, y + away), (x - away - width, y + away),
         (x + 3 * away, y - 3 * away - height), (x - 3 * away - width, y + 3 * away),
     ]  # fmt: skip
-    for left, top in choices:
+    for number, (left, top) in enumerate(choices):
         left = min(max(left, 2.0), max(2.0, canvas.shape[1] - width - 8.0))  # noqa: PLW2901
         top = min(max(top, 2.0), max(2.0, canvas.shape[0] - height - 4.0))  # noqa: PLW2901
         box = (int(left) - 2, int(top), int(left) + width + 4, int(top) + height)
@@ -225,9 +226,10 @@ def _event_name(
     else:
         return
     taken.append(box)
-    near = (min(max(x, box[0]), box[2]), min(max(y, box[1]), box[3]))
-    for colour, thick in (((0, 0, 0), 3), (WHITE, 1)):
-        _polyline(canvas, np.array([(x, y), near]), colour, thick)
+    if number > 3:  # noqa: PLR2004  (the first four touch it)
+        near = (min(max(x, box[0]), box[2]), min(max(y, box[1]), box[3]))
+        for colour, thick in (((0, 0, 0), 3), (WHITE, 1)):
+            _polyline(canvas, np.array([(x, y), near]), colour, thick)
     cv2.rectangle(canvas, box[:2], box[2:], (0, 0, 0), -1)
     _write(canvas, label, (box[0] + 3, box[1]), WHITE, scale)
 
@@ -245,16 +247,19 @@ def _labels(inspection: Inspection, zoom: float, text: float) -> list[_Label]:
         if shape.role == "edge" and len(good):
             edges.setdefault((feature, shape.item), []).append(good)
     labels = []
+    room = max((_extent(_label_words(key, items), text)[0] for key in edges), default=0)
     for key, lines in edges.items():
         verdict = _worst(items.get(key, []))
-        sign, colour = STYLE[verdict]
         x, y = np.mean([line[0] for line in lines], axis=0)
         end = np.mean([line[-1] for line in lines], axis=0)
-        words = " ".join(part for part in (key[1], _width_words(items.get(key, [])), sign) if part)
         upright = bool(abs(end[1] - y) > abs(end[0] - x))
         if (end[1] < y) if upright else (end[0] < x):
             x, y = end
-        labels.append(_Label(words, colour, WORST_FIRST.index(verdict), upright, turned=False, x=x * zoom, y=y * zoom))
+        x, y = x * zoom, y * zoom
+        if (y if upright else x) < room:  # the margin is near, and there the label hides nothing
+            x, y = (x, 0.0) if upright else (0.0, y)
+        rank, colour = WORST_FIRST.index(verdict), STYLE[verdict][1]
+        labels.append(_Label(_label_words(key, items), colour, rank, upright, turned=False, x=x, y=y))
     boxes = [_label_box(label, text) for label in labels]
     if any(_overlap(a, b) for number, a in enumerate(boxes) for b in boxes[:number]):
         labels = [replace(label, turned=label.upright) for label in labels]
@@ -266,12 +271,12 @@ def _labels(inspection: Inspection, zoom: float, text: float) -> list[_Label]:
     return kept
 
 
-def _width_words(rows: list[dict[str, Any]]) -> str:
-    """Return the mean width with its expanded uncertainty, rounded to two digits of it."""
-    for row in rows:
-        if row["quantity"] == "width_mean" and row["value"] is not None:
-            return value_words(row["value"], row["expanded_u"], row["unit"])
-    return ""
+def _label_words(key: tuple[str, str], items: dict[tuple[str, str], list[dict[str, Any]]]) -> str:
+    """Return a line's name, mean width and sign of the worst verdict."""
+    rows = items.get(key, [])
+    widths = [row for row in rows if row["quantity"] == "width_mean" and row["value"] is not None]
+    width = "".join(value_words(row["value"], row["expanded_u"], row["unit"]) for row in widths)
+    return " ".join(part for part in (key[1], width, STYLE[_worst(rows)][0]) if part)
 
 
 def value_words(value: float, expanded_u: float | None, unit: str) -> str:

@@ -113,15 +113,23 @@ def in_order(
         Results.
     """
     pool: Executor = Here() if workers == 1 else Workers(workers)
+    spare = Workers(1)  # starts no process before it is needed
     ahead = 1 if workers == 1 else AHEAD_PER_WORKER * workers
     under_way: deque[tuple[Task, Future[Result]]] = deque()
 
     def finish() -> Result:
+        nonlocal spare
         task, future = under_way[0]
         try:
             result = future.result()
         except BrokenExecutor:
-            result = _alone(work, task, lost)
+            try:
+                again: Future[Result] = spare.submit(work, task)
+                result = again.result()
+            except BrokenExecutor:
+                spare.drop()
+                spare = Workers(1)
+                result = lost(task)
         under_way.popleft()
         return result
 
@@ -142,18 +150,7 @@ def in_order(
         if under_way and isinstance(pool, Workers):
             pool.drop()
         pool.shutdown()
-
-
-def _alone(work: Callable[[Task], Result], task: Task, lost: Callable[[Task], Result]) -> Result:
-    """Try a task again in a worker of its own."""
-    pool = Workers(1)
-    try:
-        future: Future[Result] = pool.submit(work, task)
-        return future.result()
-    except BrokenExecutor:
-        return lost(task)
-    finally:
-        pool.drop()
+        spare.drop()
 
 
 def _begin() -> None:

@@ -91,7 +91,9 @@ def test_names_in_any_script_are_drawn_with_a_question_mark_for_each_foreign_let
 def test_event_is_outlined_and_named() -> None:
     image = np.full((400, 400), 90, np.uint8)
     turn = np.linspace(0, 2 * np.pi, 30)
-    outline = Shape(item="L1", role="event", points_px=np.stack([200 + 20 * np.cos(turn), 200 + 20 * np.sin(turn)], 1))
+    outline = Shape(
+        item="L1", role="event:neck", points_px=np.stack([200 + 20 * np.cos(turn), 200 + 20 * np.sin(turn)], 1)
+    )
     event = {"feature": "bus", "item": "L1", "event": "neck", "x_px": 200.0, "y_px": 200.0}
     plain = draw_picture(image, Inspection(scale=SCALE), "x")
     drawn = draw_picture(image, Inspection(shapes=[("bus", outline)], events=[event], scale=SCALE), "x")
