@@ -190,7 +190,8 @@ def fit_spectrum(  # noqa: PLR0913  (a series and all that has been done to it)
 
     The ends are tapered over a twentieth of the length each, or leakage would drown a smooth edge's high frequencies.
 
-    Missing samples are bridged by straight lines, and the expectation is lowered by the power that a bridge lacks.
+    Missing samples are bridged by straight lines, which carry no noise of their own. With 5 % missing in clumps this
+    moves sigma, noise and S(0) by a few per cent at most; above 10 % the fit says `gappy`.
 
     References
     ----------
@@ -205,7 +206,7 @@ def fit_spectrum(  # noqa: PLR0913  (a series and all that has been done to it)
         msg = f"{int(valid.sum(axis=1).min())} samples along the line; its roughness needs at least {FEWEST_SAMPLES}"
         raise FeatureError(msg, Flag.SHORT_SAMPLING)
     kernel = bin_kernel(n, line=line_removed)
-    filled, bridged = _bridge(data, valid)
+    filled = _bridge(data, valid)
     if line_removed:  # of the full length; what is left over the piece fitted is removed here
         filled = _without_line(filled)
     power = kernel.average(periodogram(filled, 1.0, taper=kernel.taper).mean(axis=0))
@@ -213,7 +214,6 @@ def fit_spectrum(  # noqa: PLR0913  (a series and all that has been done to it)
     if scale == 0.0:  # drawn, not taken: rounding stands in for noise
         scale = (1e-9 * step) ** 2
         power = np.full_like(power, scale)
-    seen = kernel.average(bridged)
     transfer = np.atleast_1d(np.asarray(noise_transfer, dtype=np.float64)) ** 2
     frequency = np.arange(n // 2 + 1) / n
     transfer = np.interp(frequency, np.linspace(0.0, 0.5, transfer.size), transfer)
@@ -221,7 +221,7 @@ def fit_spectrum(  # noqa: PLR0913  (a series and all that has been done to it)
     prior = _VAGUE_NOISE
     if noise_expected:
         prior = (float(np.log(noise_multiplicity * noise_expected**2 / scale)), 2.0 * noise_relative_u)
-    likelihood = _Likelihood(kernel, power / scale, kernel.weight * data.shape[0], seen, floor, blur / step, prior)
+    likelihood = _Likelihood(kernel, power / scale, kernel.weight * data.shape[0], floor, blur / step, prior)
     mean, u = _posterior(likelihood, n)
     root = np.sqrt(scale)
     sigma, xi, noise = root * np.exp(mean[0] / 2.0), step * np.exp(mean[1]), root * np.exp(mean[3] / 2.0)
@@ -260,25 +260,18 @@ def _without_line(data: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.asarray(data - data.mean(axis=-1, keepdims=True) - slope[..., None] * ramp)
 
 
-def _bridge(data: NDArray[np.float64], valid: NDArray[np.bool_]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Fill gaps by straight lines; return with it the power that is left, at each frequency."""
-    n = data.shape[1]
-    left = np.ones(n // 2 + 1)
+def _bridge(data: NDArray[np.float64], valid: NDArray[np.bool_]) -> NDArray[np.float64]:
+    """Return series with gaps filled by straight lines."""
     if valid.all():
-        return data, left
+        return data
     filled = data.copy()
-    place = np.arange(n)
-    frequency = np.arange(n // 2 + 1) / n
+    place = np.arange(data.shape[1])
     for row, good in zip(filled, valid, strict=True):
-        known = row[good]
-        # Each end of a bridge rests on several samples, or its noise would pass for slow roughness.
-        weight = np.convolve(np.ones_like(known), np.ones(5), "same")
-        smooth = np.convolve(known, np.ones(5), "same") / weight
+        # Each end of a bridge rests on three samples, or its noise would pass for slow roughness.
+        known = np.pad(row[good], 1, mode="edge")
+        smooth = (known[:-2] + known[1:-1] + known[2:]) / 3.0
         row[~good] = np.interp(place[~good], place[good], smooth)
-        ends = np.flatnonzero(np.diff(np.concatenate([[True], good, [True]]).astype(np.int8)))
-        for gap in ends[1::2] - ends[::2]:
-            left -= gap / n * (1.0 - np.sinc(frequency * gap) ** 4) / len(data)
-    return filled, left
+    return filled
 
 
 @dataclass(frozen=True, slots=True)
@@ -288,7 +281,6 @@ class _Likelihood:
     kernel: BinKernel
     power: NDArray[np.float64]
     weight: NDArray[np.float64]
-    seen: NDArray[np.float64]
     floor: NDArray[np.float64]
     blur: float
     noise_prior: tuple[float, float]
@@ -301,7 +293,6 @@ class _Likelihood:
         Shapes (m,), (2, m), (3, m), (m,). `start` holds first guesses, shape (2, m).
         """
         bins, kept = self.kernel.spectrum(np.exp(ln_xi), hurst, self.blur)
-        bins = bins * self.seen
         centre, width = self.noise_prior
         x = start
         for left in range(iterations, -1, -1):
@@ -499,7 +490,7 @@ def amplitude_filter(
     """
     row = np.asarray(series, dtype=np.float64)
     valid = np.isfinite(row)
-    filled = _bridge(row[None], valid[None])[0][0]
+    filled = _bridge(row[None], valid[None])[0]
     trend = filled - _without_line(filled) if process.line_removed else np.full_like(filled, filled.mean())
     pad = row.size // 2
     size = fft.next_fast_len(row.size + 2 * pad, real=True)
