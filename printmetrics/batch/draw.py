@@ -217,7 +217,7 @@ def _event_name(
         (x + away, y + away), (x - away - width, y + away),
         (x + 3 * away, y - 3 * away - height), (x - 3 * away - width, y + 3 * away),
     ]  # fmt: skip
-    for number, (left, top) in enumerate(choices):
+    for number, (left, top) in enumerate(choices):  # noqa: B007  (used after the loop)
         left = min(max(left, 2.0), max(2.0, canvas.shape[1] - width - 8.0))  # noqa: PLW2901
         top = min(max(top, 2.0), max(2.0, canvas.shape[0] - height - 4.0))  # noqa: PLW2901
         box = (int(left) - 2, int(top), int(left) + width + 4, int(top) + height)

@@ -395,8 +395,9 @@ def _many(folder: Path, png: bytes, number: int) -> None:
 
 def _start(folder: Path, workers: int) -> subprocess.Popen[str]:
     home = folder.parent
+    options = ["--recipe", home / "recipe.toml", "--out", home / "out", "--workers", str(workers)]
     return subprocess.Popen(
-        [COMMAND, "measure", folder, "--recipe", home / "recipe.toml", "--out", home / "out", "--workers", str(workers)],
+        [COMMAND, "measure", folder, *options],
         stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, start_new_session=True,
     )  # fmt: skip
 
