@@ -11,6 +11,9 @@ from typing import TYPE_CHECKING, Any
 from printmetrics._version import __version__
 
 if TYPE_CHECKING:
+    from printmetrics.batch import measure_folder
+    from printmetrics.inspect import inspect_picture
+    from printmetrics.io.pictures import find_pictures, read_picture
     from printmetrics.recipe import Recipe, load_recipe
     from printmetrics.scale import Scale
     from printmetrics.verdict import judge
@@ -18,11 +21,25 @@ if TYPE_CHECKING:
 _HOME = {
     "Recipe": "printmetrics.recipe",
     "Scale": "printmetrics.scale",
+    "find_pictures": "printmetrics.io.pictures",
+    "inspect_picture": "printmetrics.inspect",
     "judge": "printmetrics.verdict",
     "load_recipe": "printmetrics.recipe",
+    "measure_folder": "printmetrics.batch",
+    "read_picture": "printmetrics.io.pictures",
 }
 
-__all__ = ["Recipe", "Scale", "__version__", "judge", "load_recipe"]
+__all__ = [
+    "Recipe",
+    "Scale",
+    "__version__",
+    "find_pictures",
+    "inspect_picture",
+    "judge",
+    "load_recipe",
+    "measure_folder",
+    "read_picture",
+]
 
 
 def __getattr__(name: str) -> Any:  # noqa: ANN401  (whatever the name stands for)

@@ -46,8 +46,17 @@ def test_where_the_guard_bands_meet_nothing_conforms() -> None:
     assert judge(NUMBER, 20.0, 2.0, NONE, LOWER, UPPER) == "undecided"
 
 
-def test_an_exact_reading_on_its_limit_conforms() -> None:
-    assert judge(NUMBER, UPPER, 0.0, NONE, LOWER, UPPER) == "conforming"
+@pytest.mark.parametrize("limit", [LOWER, UPPER])
+@pytest.mark.parametrize("is_count", [COUNT, NUMBER])
+def test_an_exact_reading_on_its_limit_conforms(is_count: bool, limit: float) -> None:
+    assert judge(is_count, limit, 0.0, NONE, LOWER, UPPER) == "conforming"
+
+
+# Powers of two, so that the guard band is exact in binary.
+@pytest.mark.parametrize(("inner", "outer"), [(18.5, 17.5), (21.5, 22.5)])
+def test_the_ends_of_the_guard_band_belong_inside(inner: float, outer: float) -> None:
+    assert judge(NUMBER, inner, 0.25, NONE, LOWER, UPPER, 2.0) == "conforming"
+    assert judge(NUMBER, outer, 0.25, NONE, LOWER, UPPER, 2.0) == "undecided"
 
 
 def test_without_limits_there_is_no_verdict() -> None:

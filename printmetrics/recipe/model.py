@@ -59,7 +59,8 @@ def _pair(value: Any, info: ValidationInfo) -> tuple[float, float]:  # noqa: ANN
                 "measure it on a ruler picture of known pitch, or write pixels = true while it is unknown",
             )
         )
-        msg = f"must be a number of micrometres per pixel, {rule}, or a pair [x, y]; got {json.dumps(value)}; {remedy}"
+        shown = json.dumps(value, default=str)
+        msg = f"must be a number of micrometres per pixel, {rule}, or a pair [x, y]; got {shown}; {remedy}"
         raise _fault(msg)
     return float(numbers[0]), float(numbers[1])
 

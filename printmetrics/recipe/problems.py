@@ -21,6 +21,7 @@ Path = tuple[str | int, ...]
 _STRING_OR_COMMENT = re.compile(
     r'"""(?:\\.|[^\\])*?"{3,5}|\'\'\'.*?\'{3,5}|"(?:\\.|[^"\\\n])*"|\'[^\'\n]*\'|#[^\n]*', re.DOTALL
 )
+_CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f]")
 _HEADER = re.compile(r"\s*(\[\[?)([^\[\]]+)\]")
 
 
@@ -141,7 +142,10 @@ def explain(
         for path, group in by_path.items()
     )
     count = "1 problem" if len(found) == 1 else f"{len(found)} problems"
-    listed = "".join(f"\n  {file}, line {line}: {text}" for line, text in found)
+    # A name may hold signs that would steer a terminal.
+    listed = "".join(
+        f"\n  {file}, line {line}: {_CONTROL.sub(lambda c: ascii(c[0])[1:-1], text)}" for line, text in found
+    )
     return f"the recipe cannot be used, {count}:{listed}"
 
 
