@@ -22,6 +22,7 @@ MIN_BLUR_PX, MAX_BLUR_PX = 0.35, 40.0
 _REACH = 4.0  # window beyond the edge, in blurs
 _SCOUT_STRIDE, _SCOUT_ROWS = 8, 256  # levels and blur are settled on so many of the rows
 _SCOUT_STEPS, _FULL_STEPS = (3, 8), (3, 6)  # for one edge alone, and for edges that share their light
+_SETTLED_BLUR = 0.05
 _SHORT_STEP = (0.2, 0.02)  # all rows are stepped again while the rms step is this many blurs or more
 _FEWEST_ROWS = 8  # a block with fewer good rows has no levels of its own
 _MISFIT_SIGMAS = 6.0  # a row is a defect's when its residual stands out of the noise by this much,
@@ -98,8 +99,8 @@ class EdgeFit:
         Standard uncertainty of one row's position from pixel noise. [px]
     mean_covariance : ndarray of float, shape (K, K)
         Covariance of the edges' mean positions from pixel noise, shared terms included. [px^2]
-    blur : float
-        Gaussian sigma along the row, pixel aperture included. [px]
+    blur, u_blur : float
+        Gaussian sigma along the row, pixel aperture included, and its standard uncertainty from pixel noise. [px]
     levels : ndarray of float, shape (B, K + 1)
         Levels between the edges, left to right, in blocks of rows. [counts]
     noise : float
@@ -110,6 +111,7 @@ class EdgeFit:
     u_row: NDArray[np.float64]
     mean_covariance: NDArray[np.float64]
     blur: float
+    u_blur: float
     levels: NDArray[np.float64]
     noise: float
 
@@ -200,7 +202,10 @@ def fit_edges(windows: list[Window]) -> list[EdgeFit]:
     together = int(windows[0].start.shape[1] > 1)
     scout = _Stack(windows, stride=_SCOUT_STRIDE)
     for _ in range(_SCOUT_STEPS[together]):
+        before = scout.blur
         scout.step()
+        if not together and np.abs(scout.blur - before).max() < _SETTLED_BLUR * before.min():
+            break
     stack = _Stack(windows, stride=1)
     stack.blur, stack.shared = scout.blur, scout.shared
     for _ in range(_FULL_STEPS[together]):
@@ -376,6 +381,7 @@ class _Stack:
             fits.append(
                 EdgeFit(
                     position=position[:, part].T, u_row=u_row, blur=blur, noise=noise,
+                    u_blur=math.sqrt(self.fit.blur_var[g]) * noise,
                     mean_covariance=(own[:, :, g] + carried[g]) * noise**2,
                     levels=self.shared[self.block_group == g],
                 )

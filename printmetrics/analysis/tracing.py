@@ -24,7 +24,7 @@ _AT_END = 0.003  # and further where more than this part of it is found at the e
 _KNOWN_BLUR = 5.0  # narrower than this many blurs, a line takes its blur from wider ones where there are any
 _PASSES = 5  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
-_SHAPE_ROWS = 512  # the edge's shape is judged on so many rows
+_SHAPE_ROWS = 256  # the edge's shape is judged on so many rows
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -43,8 +43,8 @@ class Trace:
         Standard uncertainty of one edge point from pixel noise. [px]
     covariance : ndarray of float, shape (2, 2)
         Covariance of the two mean edge positions from pixel noise, levels and blur included. [px^2]
-    blur : ndarray of float, shape (2,)
-        Gaussian sigma along the row of either edge. [px]
+    blur, u_blur : ndarray of float, shape (2,)
+        Gaussian sigma along the row of either edge, and its standard uncertainty from pixel noise. [px]
     ink, bare : float
         Median levels. [counts]
     bare_range : float
@@ -65,6 +65,7 @@ class Trace:
     u_row: NDArray[np.float64]
     covariance: NDArray[np.float64]
     blur: NDArray[np.float64]
+    u_blur: NDArray[np.float64]
     ink: float
     bare: float
     bare_range: float
@@ -289,8 +290,9 @@ class _Tracer:
         if usable.sum() < _FEWEST_ROWS or np.ptp(levels) == 0:
             return None
         start = np.stack([self._place(e, edges)[cut.rows] for e in cut.edges], axis=1) - cut.first[:, None]
+        others = self._others(cut, edges, blurs, blur)
         return Window(
-            pixels=cut.pixels - self._others(cut, edges, blurs, blur), start=start, levels=np.array(levels), blur=blur,
+            pixels=cut.pixels - others if np.ndim(others) else cut.pixels, start=start, levels=np.array(levels), blur=blur,
             usable=usable, fixed_blur=known,
         )
 
@@ -314,6 +316,11 @@ class _Tracer:
     ) -> NDArray[np.float32] | float:
         """Light that edges near by, which the fit doesn't hold, bring into its window beyond the plateau next to it."""
         n = cut.pixels.shape[1]
+        (k, side), (last, last_side) = cut.own[0], cut.own[-1]
+        outer, inner = 2 * (n + 5 * blur), n + 5 * blur
+        alone = self.space[k, 0] > outer and self.space[last, 1] > outer
+        if alone and (side != last_side or self.line_width[k] > inner):
+            return 0.0
         extra: NDArray[np.float64] | float = 0.0
         columns = np.arange(n)
         first, last = cut.edges[0], cut.edges[-1]
@@ -337,7 +344,7 @@ class _Tracer:
     ) -> Trace | None:
         if any(w.fit is None for w in cuts) or np.isfinite(edges).all(axis=0).sum() < _FEWEST_ROWS:
             return None
-        covariance, u_row, shift = np.zeros((2, 2)), np.zeros(2), np.zeros(2)
+        covariance, u_row, u_blur, shift = np.zeros((2, 2)), np.zeros(2), np.zeros(2), np.zeros(2)
         over, bare, ink, noise = [], [], [], []
         for cut in cuts:
             fit = cut.fit
@@ -346,6 +353,7 @@ class _Tracer:
             sides = [side for _, side in cut.own]
             covariance[np.ix_(sides, sides)] = fit.mean_covariance[np.ix_(at, at)]
             u_row[sides] = fit.u_row[at]
+            u_blur[sides] = fit.u_blur
             beyond, shift[sides] = self._shape(cut, fit, at)
             over.append(beyond)
             noise.append(fit.noise)
@@ -354,7 +362,7 @@ class _Tracer:
                 ink.append(fit.levels[:, j + 1 - side])
         return Trace(
             way=((self.course[k] > 0) & (self.course[k] < self.width - 1)).all(axis=0),
-            course=self.course[k], edges=edges, u_row=u_row, covariance=covariance, blur=blurs,
+            course=self.course[k], edges=edges, u_row=u_row, covariance=covariance, blur=blurs, u_blur=u_blur,
             ink=float(np.median(np.concatenate(ink))), bare=float(np.median(np.concatenate(bare))),
             bare_range=float(np.ptp(np.concatenate(bare))),
             middle_level=(ink[0] + bare[0]) / 2, noise=float(np.mean(noise)),
@@ -392,11 +400,16 @@ def _course(rows: NDArray[np.float64], edge: NDArray[np.float64], height: int) -
     course = np.interp(r, rows, edge)
     if len(rows) > 1:
         n = min(len(rows), 8)
-        head, tail = np.polyfit(rows[:n], edge[:n], 1), np.polyfit(rows[-n:], edge[-n:], 1)
+        head, tail = _slope(rows[:n], edge[:n]), _slope(rows[-n:], edge[-n:])
         before, after = r < rows[0], r > rows[-1]
-        course[before] = edge[0] + head[0] * (r[before] - rows[0])
-        course[after] = edge[-1] + tail[0] * (r[after] - rows[-1])
+        course[before] = edge[0] + head * (r[before] - rows[0])
+        course[after] = edge[-1] + tail * (r[after] - rows[-1])
     return course
+
+
+def _slope(x: NDArray[np.float64], y: NDArray[np.float64]) -> float:
+    off = x - x.mean()
+    return float(off @ y / (off @ off))
 
 
 def _near_seen(line: CoarseLine, height: int) -> NDArray[np.bool_]:

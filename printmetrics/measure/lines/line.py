@@ -58,14 +58,17 @@ class LineFigures:
         Of the mean edges, from pixel noise.
     u_point : ndarray of float, shape (2,)
         Of one edge point, from pixel noise.
-    blur : ndarray of float, shape (2,)
-        Gaussian sigma of either edge, across the line.
+    blur, u_blur : ndarray of float, shape (2,)
+        Gaussian sigma of either edge, across the line, and its standard uncertainty from pixel noise.
     shape_shift : ndarray of float, shape (2,)
         How far either edge's middle lies off the model's.
     level_shift : float
         By how much the width at the recipe's edge level exceeds that at mid-level.
     width, left, right : Process or None
         Fitted processes; None where the line is too short or perfectly straight.
+    mean_u : dict of str to (float, float)
+        Standard uncertainty of the mean of ``width``, ``left`` and ``right`` as that of the process, and its degrees
+        of freedom; empty where a fit is missing.
     flags : Flag
         What is doubtful about the line as a whole.
     """
@@ -76,17 +79,28 @@ class LineFigures:
     covariance: NDArray[np.float64]
     u_point: NDArray[np.float64]
     blur: NDArray[np.float64]
+    u_blur: NDArray[np.float64]
     shape_shift: NDArray[np.float64]
     level_shift: float
     width: Process | None
     left: Process | None
     right: Process | None
+    mean_u: dict[str, tuple[float, float]]
     flags: Flag
 
     @property
     def length(self) -> float:
         """Length measured."""
         return float(np.isfinite(self.straight.width).sum()) * self.straight.step
+
+    @property
+    def centre_variance(self) -> float:
+        """Variance of the mean position of the line's middle that its wander along the way brings.
+
+        S_middle = (S_left + S_right) / 2 - S_width / 4 at frequency zero, from S_width = S_left + S_right - 2 S_LR.
+        """
+        left, right, width = (self.mean_u[name][0] ** 2 for name in ("left", "right", "width"))
+        return max((left + right) / 2 - width / 4, (left + right) / 8)
 
 
 def level_shift(blur: NDArray[np.float64], level: float, *, bright: bool) -> float:
@@ -164,6 +178,8 @@ def line_figures(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> Lin
     for name, (values, points_each, transfer, line_removed) in series.items():
         noise = float(np.sqrt((u_point**2).mean())) if name == "width" else float(u_point[int(name == "right")])
         fits[name] = _fit(values, straight.step, around, noise, points_each, transfer, line_removed=line_removed)
+    length = float(np.isfinite(straight.width).sum()) * straight.step
+    mean_u = {name: u_mean(fit, length) for name, fit in fits.items() if fit is not None}
     return LineFigures(
         name=seen.names[k],
         straight=straight,
@@ -171,8 +187,10 @@ def line_figures(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> Lin
         covariance=trace.covariance * normal**2,
         u_point=u_point,
         blur=blur,
+        u_blur=trace.u_blur * normal,
         shape_shift=trace.shape_shift * normal,
         level_shift=level_shift(blur, options.edge_level, bright=options.ink == "bright"),
+        mean_u=mean_u if len(mean_u) == len(fits) else {},
         flags=_flags(seen, k, sight, blur, options),
         **fits,
     )
@@ -326,8 +344,7 @@ class _LineReadings:
         self._roughness()
         self._process()
         line = self.line
-        blur = float(line.blur.mean())
-        self.add("edge_blur", blur, noise=float(np.abs(np.diff(line.blur))[0]) / 2 + 0.02 * blur)
+        self.add("edge_blur", float(line.blur.mean()), noise=float(np.hypot(*line.u_blur)) / 2)
         self._tilt()
         self.add("length", line.length, noise=line.straight.step / math.sqrt(6.0))
         self.add("open_count", float(self.opens))
@@ -335,8 +352,8 @@ class _LineReadings:
 
     def _sampling(self) -> tuple[float | None, float, Flag]:
         """Uncertainty of the mean width as that of the process, its degrees of freedom, and doubts."""
-        if self.line.width is not None:
-            return *u_mean(self.line.width, self.line.length), Flag.NONE
+        if self.line.mean_u:
+            return *self.line.mean_u["width"], Flag.NONE
         if float(np.nanstd(self.width)) == 0.0:
             return 0.0, math.inf, Flag.NONE
         return None, math.inf, Flag.SHORT_SAMPLING | Flag.OUTSIDE_VALIDITY
@@ -446,29 +463,8 @@ class _LineReadings:
         n, length = max(int(np.isfinite(straight.width).sum()), 2), max(line.length, straight.step)
         lever = math.sqrt(12.0) / length
         noise = math.degrees(lever * math.sqrt(float((line.u_point**2).sum()) / 4 / n))
-        sampling = math.degrees(lever * math.sqrt(centre_variance(line))) if line.left and line.right else None
+        sampling = math.degrees(lever * math.sqrt(line.centre_variance)) if line.mean_u else None
         self.add("tilt", tilt, noise=noise, sampling=sampling, scaled=False)
-
-
-def centre_variance(line: LineFigures) -> float:
-    """Return the variance of the mean position of a line's middle that its wander along the way brings.
-
-    Parameters
-    ----------
-    line : LineFigures
-        The line, with its processes fitted.
-
-    Returns
-    -------
-    float
-        Variance. [length^2]
-
-    Notes
-    -----
-    S_middle = (S_left + S_right) / 2 - S_width / 4, at frequency zero: derived from S_width = S_left + S_right - 2 S_LR.
-    """
-    left, right, width = (u_mean(p, line.length)[0] ** 2 if p else 0.0 for p in (line.left, line.right, line.width))
-    return max((left + right) / 2 - width / 4, (left + right) / 8)
 
 
 def _sd(values: NDArray[np.float64], *, line_removed: bool) -> float:

@@ -7,9 +7,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from printmetrics.analysis.roughness import u_mean
 from printmetrics.flags import Flag
-from printmetrics.measure.lines.line import NECK_BLURS, LineFigures, centre_variance, running_mean
+from printmetrics.measure.lines.line import NECK_BLURS, LineFigures, running_mean
 from printmetrics.measure.readings import Reading, effective_dof
 from printmetrics.quantities import CATALOGUE
 
@@ -74,23 +73,26 @@ def neighbour_readings(
     shape = abs(float(two.shape_shift[0] - one.shape_shift[1])) / _SQRT3
     common = math.hypot(mean * scale, shape)
     readings = []
-    if one.left and one.right and two.left and two.right:
-        wander = math.sqrt(centre_variance(one) + centre_variance(two))
-        (u_one, dof_one), (u_two, dof_two) = u_mean(one.right, length), u_mean(two.left, length)
-        sampling: float | None = math.hypot(u_one, u_two)
+    sampling = dof = wander = None
+    u_point = 0.0
+    if one.mean_u and two.mean_u and one.right and two.left:
+        wander = math.sqrt(one.centre_variance + two.centre_variance)
+        (u_one, dof_one), (u_two, dof_two) = one.mean_u["right"], two.mean_u["left"]
+        sampling = math.hypot(u_one, u_two)
         dof = effective_dof([(noise, math.inf), (u_one, dof_one), (u_two, dof_two), (common, math.inf)])
-        u_raw_point = math.hypot(one.right.noise, two.left.noise)
-    else:
-        wander, sampling, dof, u_raw_point = None, None, math.inf, 0.0  # type: ignore[assignment]
-        if any(float(np.nanstd(e)) > 0 for e in (near[1], far[0])):
-            flags |= Flag.SHORT_SAMPLING | Flag.OUTSIDE_VALIDITY
+        u_point = math.hypot(one.right.noise, two.left.noise)
+    elif any(float(np.nanstd(e)) > 0 for e in (near[1], far[0])):
+        flags |= Flag.SHORT_SAMPLING | Flag.OUTSIDE_VALIDITY
     readings.append(
         reading("pitch", pitch, u_noise=noise_pitch, u_sampling=wander, u_common=pitch * scale, flags=flags)
     )
     readings.append(
-        reading("space_mean", mean, u_noise=noise, u_sampling=sampling, u_common=common, dof=dof, flags=flags)
+        reading(
+            "space_mean", mean, u_noise=noise, u_sampling=sampling, u_common=common,
+            dof=math.inf if dof is None else dof, flags=flags,
+        )
     )
-    readings.append(_least(reading, one, two, options, u_raw_point, mean, bridges, shape, flags))
+    readings.append(_least(reading, one, two, options, u_point, mean, bridges, shape, flags))
     return [*readings, count]
 
 
@@ -115,28 +117,16 @@ def _least(reading, one, two, options, u_point, mean, bridges, shape, flags):  #
 
 
 def _on_common_axis(one: Straightened, two: Straightened) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Edges of two lines on the first one's grid, both from the mean of their axes."""
-    slope = (one.slope + two.slope) / 2
-    pairs = []
-    for straight in (one, two):
-        # Turn by the small angle between the line's own axis and the common one.
-        turn = (slope - straight.slope) / (1 + slope * straight.slope)
-        pairs.append([(straight.s + turn * t, t - turn * straight.s) for t in (straight.left, straight.right)])
-    grid = one.s
-    edges = []
-    for pair in pairs:
-        both = []
-        for s, t in pair:
-            good = np.isfinite(t)
-            line = np.full(len(grid), np.nan)
-            if good.any():
-                line = np.interp(grid, s[good], t[good], left=np.nan, right=np.nan)
-                place = np.searchsorted(s[good], grid)
-                last = good.sum() - 1
-                gap = np.minimum(
-                    np.abs(grid - s[good][np.clip(place - 1, 0, last)]), np.abs(s[good][np.clip(place, 0, last)] - grid)
-                )
-                line[gap > 0.8 * one.step] = np.nan
-            both.append(line)
-        edges.append(np.array(both))
-    return edges[0], edges[1]
+    """Edges of two lines side by side, from the mean of their axes; each place to half a step along."""
+    turn = (two.slope - one.slope) / (1 + two.slope * one.slope) / 2
+    # Turned by the small angle to the common axis, places along move by angle times distance from the axis.
+    start = [f.s[0] + angle * float(np.nanmean(f.left)) for f, angle in ((one, turn), (two, -turn))]
+    lag = round((start[1] - start[0]) / one.step)
+    n = min(len(one.s) - max(lag, 0), len(two.s) - max(-lag, 0))
+    if n <= 0:
+        return np.full((2, 1), np.nan), np.full((2, 1), np.nan)
+    pair = []
+    for straight, angle, skip in ((one, turn, max(lag, 0)), (two, -turn, max(-lag, 0))):
+        part = slice(skip, skip + n)
+        pair.append(np.array([straight.left[part], straight.right[part]]) - angle * straight.s[part])
+    return pair[0], pair[1]
