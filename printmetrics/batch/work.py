@@ -141,7 +141,7 @@ def lost_one(task: Task) -> Outcome:
         Failed.
     """
     reason = (
-        "the worker process measuring it was ended from outside, twice; the machine may be short of memory: "
+        "the worker process measuring it died, twice; if the machine is short of memory, "
         "use fewer workers, or measure this picture alone"
     )
     return Outcome(image=task.found.name, columns=_columns(task), inspection=failed_inspection(task.recipe, reason))

@@ -21,8 +21,9 @@ if TYPE_CHECKING:
 SOME_FAILED = 1
 NOT_CONFORMING = 3
 MOST_FAILURES = 10
-# Blue and orange against magenta stay apart for colour-blind eyes.
-VERDICT_STYLE = {"conforming": "blue", "undecided": "yellow", "nonconforming": "bold magenta"}
+WIDE = 160  # columns of the summary off a terminal
+# The signs of the drawings; blue, yellow and magenta stay apart for colour-blind eyes.
+SIGNS = {"ok": "blue", "?": "yellow", "X": "bold magenta"}
 
 
 @click.command()
@@ -121,24 +122,26 @@ def _print_summary(summary: RunSummary) -> None:
 
     from printmetrics.batch.draw import value_words  # noqa: PLC0415
 
-    console = Console(soft_wrap=False, highlight=False)
+    console = Console(highlight=False)
     if not console.is_terminal:
-        console.width = 120
+        console.width = WIDE
     if summary.tallies:
         table = Table(box=None, pad_edge=False, header_style="bold")
-        for heading in ("feature", "quantity", "conforming", "undecided", "nonconforming", "worst", "limits", "where"):
-            table.add_column(heading, justify="right" if heading in VERDICT_STYLE else "left", overflow="fold")
+        for heading in ("feature", "quantity", *SIGNS, "worst", "limits"):
+            table.add_column(heading, justify="right" if heading in SIGNS else "left", no_wrap=True)
+        table.add_column("where", overflow="fold")
         for (feature, quantity), tally in summary.tallies.items():
             worst, counts = tally.worst, (tally.conforming, tally.undecided, tally.nonconforming)
             table.add_row(
-                Text(feature),
+                Text(_printable(feature)),
                 quantity,
-                *(Text(str(n), VERDICT_STYLE[v] if n else "dim") for n, v in zip(counts, VERDICT_STYLE, strict=True)),
+                *(Text(str(n), style if n else "dim") for n, style in zip(counts, SIGNS.values(), strict=True)),
                 value_words(worst["value"], worst["expanded_u"], worst["unit"]) if worst else "withheld",
                 _limits(worst) if worst else "",
                 Text(f"{worst['item']} in {_printable(worst['image'])}" if worst else ""),
             )
         console.print(table)
+        click.echo("ok conforming, ? undecided, X nonconforming; worst: farthest beyond a limit, or nearest to it\n")
     drawn = f"{summary.drawn} marked-up pictures in {summary.out / 'pictures'}; " if summary.drawn else ""
     click.echo(
         f"{summary.measured} of {summary.found} pictures measured, {summary.failed} failed; "
