@@ -170,18 +170,35 @@ def _end_with_parent() -> None:
 
 
 @contextmanager
+def interrupts_held() -> Iterator[None]:
+    """Let Ctrl-C wait until the block is done.
+
+    Yields
+    ------
+    None
+        Nothing.
+    """
+    if not hasattr(signal, "pthread_sigmask"):
+        yield
+        return
+    mask = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, mask)
+
+
+@contextmanager
 def _quiet_birth() -> Iterator[None]:
     """Let workers be born with one thread per library, and with Ctrl-C blocked, since they inherit both."""
     before = {name: os.environ.get(name) for name in ONE_THREAD}
     os.environ.update(ONE_THREAD)
-    mask = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT}) if hasattr(signal, "pthread_sigmask") else None
     try:
-        yield
+        with interrupts_held():
+            yield
     finally:
         for name, value in before.items():
             if value is None:
                 del os.environ[name]
             else:
                 os.environ[name] = value
-        if mask is not None:
-            signal.pthread_sigmask(signal.SIG_SETMASK, mask)

@@ -17,7 +17,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Self
 
 from printmetrics._version import __version__
-from printmetrics.batch.engine import in_order
+from printmetrics.batch.engine import in_order, interrupts_held
 from printmetrics.batch.work import Drawn, Outcome, Task, lost_one, measure_one
 from printmetrics.errors import FolderError
 from printmetrics.flags import Flag
@@ -217,7 +217,8 @@ def measure_folder(
         with _Record(plan, summary) as record:
             tasks = (Task(found=f, recipe=plan.recipe, columns=plan.columns, drawn=drawn) for f in plan.pictures)
             for outcome in in_order(measure_one, tasks, min(workers, len(plan.pictures)), lost_one):
-                record.add(outcome)
+                with interrupts_held():  # all of a picture's rows, or none
+                    record.add(outcome)
                 if progress is not None:
                     progress(outcome)
     except OSError as error:
@@ -257,7 +258,7 @@ def _check_out(out: Path, recipe: Recipe) -> None:
     if not same:
         msg = (
             f"{out} holds the results of another recipe or scale ({name!r}, recipe_id {earlier['recipe_id']}; "
-            f"this one is {recipe.name!r}, {recipe.recipe_id}); {remedy}"
+            f"this one is {_title(recipe)!r}, {recipe.recipe_id}); {remedy}"
         )
         raise FolderError(msg)
 
@@ -286,7 +287,7 @@ class _Record:
         recipe = plan.recipe
         self._common = {
             "revision": 0,
-            "recipe": f"{recipe.name} {recipe.version}".strip(),
+            "recipe": _title(recipe),
             "recipe_id": recipe.recipe_id,
             "scale_id": recipe.scale_id,
             "software": f"printmetrics {__version__}",
@@ -303,11 +304,12 @@ class _Record:
 
     def __exit__(self, kind: type[BaseException] | None, *_: object) -> None:
         self._files.close()
-        for table in TABLES:
-            path = self._plan.out / f"{table.name}.csv"
-            self._part(table).replace(path)
-            describe_table(path, table)
-        self._write_run("finished" if kind is None else "interrupted")
+        with interrupts_held():
+            for table in TABLES:
+                path = self._plan.out / f"{table.name}.csv"
+                self._part(table).replace(path)
+                describe_table(path, table)
+            self._write_run("finished" if kind is None else "interrupted")
 
     def _part(self, table: Table) -> Path:
         return self._plan.out / f"{table.name}.csv.part"
@@ -323,8 +325,7 @@ class _Record:
         self._write(PROFILES, _profile_rows(outcome))
         image = {"status": found.status, "reason": found.reason, "seconds": outcome.seconds, **outcome.size}
         self._write(IMAGES, [_fitting(IMAGES, columns) | image])
-        if outcome.drawing is not None:
-            self._draw(outcome.image, *outcome.drawing)
+        self._draw(outcome)
         if outcome.log:
             with (self._plan.out / "run.log").open("a", encoding="utf-8", errors="backslashreplace") as log:
                 log.write(f"{_now()} {outcome.image!r}\n{outcome.log}\n")
@@ -346,13 +347,18 @@ class _Record:
         digest, page = outcome.columns["image_sha256"], outcome.image.rpartition("#")[2] if outcome.paged else ""
         return bool(digest) and self._seen.setdefault((digest, page), outcome.image) != outcome.image
 
-    def _draw(self, image: str, suffix: str, data: bytes) -> None:
-        folder = self._plan.out / "pictures"
-        folder.mkdir(exist_ok=True)
-        if len(os.fsencode(image)) > LONGEST_NAME:
-            image = f"{image[: LONGEST_NAME // 8]}-{sha256(os.fsencode(image)).hexdigest()[:16]}"
-        (folder / f"{image}{suffix}").write_bytes(data)
-        self._summary.drawn += 1
+    def _draw(self, outcome: Outcome) -> None:
+        """Write a drawing in place of an earlier run's."""
+        folder, name = self._plan.out / "pictures", outcome.image
+        if len(os.fsencode(name)) > LONGEST_NAME:
+            name = f"{name[: LONGEST_NAME // 8]}-{sha256(os.fsencode(name)).hexdigest()[:16]}"
+        for suffix in (".png", ".jpg"):
+            (folder / f"{name}{suffix}").unlink(missing_ok=True)
+        if outcome.drawing is not None:
+            suffix, data = outcome.drawing
+            folder.mkdir(exist_ok=True)
+            (folder / f"{name}{suffix}").write_bytes(data)
+            self._summary.drawn += 1
 
     def _write_run(self, status: str) -> None:
         plan, summary = self._plan, self._summary
@@ -377,6 +383,10 @@ class _Record:
         part = plan.out / "run.json.part"
         part.write_text(json.dumps(about, indent=1) + "\n", encoding="utf-8")
         part.replace(plan.out / "run.json")
+
+
+def _title(recipe: Recipe) -> str:
+    return f"{recipe.name} {recipe.version}".strip()
 
 
 def _now() -> str:

@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 from datetime import datetime
 from typing import TYPE_CHECKING, Any, Literal
 
-from printmetrics.errors import PictureError
+from printmetrics.errors import PictureError, PrintmetricsError
 from printmetrics.inspect import Inspection, failed_inspection, inspect_picture
 from printmetrics.io.pictures import file_sha256, read_picture
 from printmetrics.recipe import moment
@@ -97,13 +97,14 @@ def measure_one(task: Task) -> Outcome:
     picture: Picture | None = None
     drawing, log = None, ""
     try:
+        columns |= _named(task)
         picture = read_picture(task.found)
         columns["image_sha256"] = picture.sha256
-        columns |= _context(task, picture)
-        inspection = inspect_picture(picture, task.recipe, columns.get("captured_at", ""))
+        columns.setdefault("captured_at", _taken(picture, task.recipe))
+        inspection = inspect_picture(picture, task.recipe, columns["captured_at"])
         if task.drawn == "all" or (task.drawn == "flagged" and inspection.calls_attention):
             drawing = _drawing(picture, inspection, task.recipe, task.found.name)
-    except PictureError as error:
+    except PrintmetricsError as error:
         inspection = failed_inspection(task.recipe, str(error))
     except Exception as error:  # noqa: BLE001  (a bug fails its picture, with a traceback in the log, and the run goes on)
         inspection = failed_inspection(task.recipe, f"bug: {type(error).__name__}: {error}; see run.log")
@@ -144,7 +145,11 @@ def lost_one(task: Task) -> Outcome:
         "the worker process measuring it died, twice; if the machine is short of memory, "
         "use fewer workers, or measure this picture alone"
     )
-    return Outcome(image=task.found.name, columns=_columns(task), inspection=failed_inspection(task.recipe, reason))
+    columns = _columns(task)
+    with contextlib.suppress(PictureError):
+        columns |= _named(task)
+        columns["image_sha256"] = file_sha256(task.found.path)
+    return Outcome(image=task.found.name, columns=columns, inspection=failed_inspection(task.recipe, reason))
 
 
 def _columns(task: Task) -> dict[str, Any]:
@@ -152,13 +157,18 @@ def _columns(task: Task) -> dict[str, Any]:
     return {"image": task.found.name, "image_sha256": "", "measured_at": now, **task.columns}
 
 
-def _context(task: Task, picture: Picture) -> dict[str, str | float]:
-    """Return the context columns: from the name, the command line, and the time from the picture's tags."""
+def _named(task: Task) -> dict[str, str | float]:
+    """Return what the file's name, the command line and the recipe say of a picture."""
     context = task.recipe.context_of(task.found.path.stem, task.columns)
-    if not context["captured_at"] and picture.captured_at:
-        with contextlib.suppress(ValueError):  # a camera whose clock was never set is no reason to fail a picture
-            context["captured_at"] = moment(picture.captured_at, task.recipe.images.time_zone)
     return {column: value for column, value in context.items() if value != ""}
+
+
+def _taken(picture: Picture, recipe: Recipe) -> str:
+    """Return when the picture was taken by its tags; a camera whose clock was never set says nothing."""
+    try:
+        return moment(picture.captured_at or "", recipe.images.time_zone)
+    except ValueError:
+        return ""
 
 
 def _drawing(picture: Picture, inspection: Inspection, recipe: Recipe, name: str) -> tuple[str, bytes]:

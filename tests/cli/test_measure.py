@@ -219,6 +219,23 @@ def test_name_that_does_not_match_the_context_fails_its_picture(folder: Path) ->
     assert "doesn't match the recipe's context" in second["reason"]
 
 
+def test_unreadable_picture_keeps_what_its_name_says(folder: Path) -> None:
+    _edit(folder, "[scale]", "[images]\ncontext = '(?P<lane>.+)'\n[scale]")
+    (folder / "c.png").write_bytes(b"")
+    assert _measure(folder).exit_code == 1
+    assert {row["lane"] for row in _table(folder.parent / "out", "measurements")} == {"a", "b", "c"}
+
+
+def test_time_in_the_pictures_tags_is_taken_where_the_offset_is_known(folder: Path) -> None:
+    pixels = cv2.imread(str(folder / "a.png"), cv2.IMREAD_GRAYSCALE)
+    tifffile.imwrite(folder / "t.tif", pixels, datetime="2026:01:31 08:15:00", metadata=None)
+    _edit(folder, "[scale]", '[images]\ninclude = ["*.tif"]\ntime_zone = "+01:00"\n[scale]')
+    assert _measure(folder).exit_code == 0
+    assert {row["captured_at"] for row in _table(folder.parent / "out", "measurements")} == {
+        "2026-01-31T08:15:00+01:00"
+    }
+
+
 def test_strict_tells_readings_that_do_not_conform(folder: Path) -> None:
     assert _measure(folder, "--strict").exit_code == 0
     _edit(folder, "upper = 12.0", "upper = 9.0")
@@ -233,7 +250,7 @@ def _clear(folder: Path) -> None:
 
 def test_drawings_are_written_for_those_that_call_for_a_look(folder: Path, png: bytes) -> None:
     (folder / "c.png").write_bytes(png)
-    for wanted, number in (("none", 0), ("all", 3)):
+    for wanted, number in (("none", 0), ("all", 3), ("none", 0)):
         assert _measure(folder, "--pictures", wanted).exit_code == 0
         assert len(_drawings(folder)) == number
     _clear(folder)
