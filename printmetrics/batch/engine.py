@@ -117,7 +117,7 @@ def in_order(
     ahead = 1 if workers == 1 else AHEAD_PER_WORKER * workers
     under_way: deque[tuple[Task, Future[Result]]] = deque()
 
-    def finish() -> Result:
+    def _finish() -> Result:
         nonlocal spare
         task, future = under_way[0]
         try:
@@ -136,7 +136,7 @@ def in_order(
     try:
         for task in tasks:
             if len(under_way) >= ahead:
-                yield finish()
+                yield _finish()
             try:
                 future = pool.submit(work, task)
             except BrokenExecutor:
@@ -145,7 +145,7 @@ def in_order(
                 future = pool.submit(work, task)
             under_way.append((task, future))
         while under_way:
-            yield finish()
+            yield _finish()
     finally:
         if under_way and isinstance(pool, Workers):
             pool.drop()

@@ -10,7 +10,7 @@ import click
 
 @click.command()
 @click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
-def demo(folder: Path) -> None:
+def demo(folder: Path) -> None:  # numpydoc ignore=PR01
     """Write a demo into DIR, a new folder: invented pictures, a recipe, and the truth about them."""
     from printmetrics.synth.demo import write_demo  # noqa: PLC0415  (keeps --help fast)
 

@@ -45,7 +45,7 @@ SIGNS = {"ok": "blue", "?": "yellow", "X": "bold magenta"}
 @click.option("--dry-run", is_flag=True, help="List what would be measured; write nothing.")
 @click.option("--quiet", is_flag=True, help="No progress, no summary; errors only.")
 @click.pass_context
-def measure(  # noqa: PLR0913  (one parameter for each option)
+def measure(  # noqa: PLR0913  # numpydoc ignore=PR01
     ctx: click.Context,
     *,
     folder: Path,
