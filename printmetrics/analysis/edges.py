@@ -6,6 +6,7 @@ Gauss-Newton with the shared terms eliminated (variable projection), so it reach
 
 from __future__ import annotations
 
+import itertools
 import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -20,10 +21,8 @@ PHASES = 64  # positions are linearised about the nearest 1/64 px, exact to the 
 ROWS_PER_BLOCK = 96  # the levels are constant over this many rows, and interpolated between
 MIN_BLUR_PX, MAX_BLUR_PX = 0.35, 40.0
 _REACH = 4.0  # window beyond the edge, in blurs
-_SCOUT_STRIDE, _SCOUT_ROWS = 8, 256  # levels and blur are settled on so many of the rows
-_SCOUT_STEPS, _FULL_STEPS = (3, 8), (3, 6)  # for one edge alone, and for edges that share their light
-_SETTLED_BLUR = 0.05
-_SHORT_STEP = (0.2, 0.02)  # all rows are stepped again while the rms step is this many blurs or more
+_SCOUT_STRIDE, _SCOUT_ROWS = 8, 256  # levels and blur are settled on so many of the rows first
+_MEDIAN_ROWS = 400  # enough for a typical value
 _FEWEST_ROWS = 8  # a block with fewer good rows has no levels of its own
 _MISFIT_SIGMAS = 6.0  # a row is a defect's when its residual stands out of the noise by this much,
 _MISFIT_STEP = 0.1  # and its rms is this part of the step: a rough edge alone leaves less
@@ -93,7 +92,7 @@ class EdgeFit:
 
     Parameters
     ----------
-    position : ndarray of float, shape (M, K)
+    position : ndarray of float, shape (K, M)
         Column of each of the K edges in each row; NaN where it was rejected. [px]
     u_row : ndarray of float, shape (K,)
         Standard uncertainty of one row's position from pixel noise. [px]
@@ -154,255 +153,333 @@ def gather(image: NDArray[Any], rows: NDArray[np.intp], first: NDArray[np.intp],
 
 
 @dataclass(slots=True, kw_only=True)
-class Window:
-    """Rows of pixels across the edges of one fit, with its first guess.
+class Windows:
+    """Rows of pixels across edges, window after window, with first guesses; all windows hold K edges.
 
     Parameters
     ----------
-    pixels : ndarray of float32, shape (M, n)
+    pixels : ndarray of float32, shape (R, n)
         Rows across the edges, each from its own first column. [counts]
-    start : ndarray of float, shape (M, K)
+    start : ndarray of float, shape (K, R)
         First guess of the edges, in columns of `pixels`. [px]
-    levels : ndarray of float, shape (K + 1,)
-        First guess of the levels, left to right. [counts]
-    blur : float
-        First guess of the Gaussian sigma. [px]
-    usable : ndarray of bool, shape (M,)
+    usable : ndarray of bool, shape (R,)
         Rows that may be used for the shared terms.
-    fixed_blur : bool
+    sizes : ndarray of int, shape (G,)
+        Rows of each window.
+    levels : ndarray of float, shape (G, K + 1)
+        First guess of the levels, left to right. [counts]
+    blur : ndarray of float, shape (G,)
+        First guess of the Gaussian sigma. [px]
+    fixed_blur : ndarray of bool, shape (G,)
         Keep the blur as given: for lines too narrow to tell it from their width.
     """
 
     pixels: NDArray[np.float32]
     start: NDArray[np.float64]
-    levels: NDArray[np.float64]
-    blur: float
     usable: NDArray[np.bool_]
-    fixed_blur: bool
+    sizes: NDArray[np.intp]
+    levels: NDArray[np.float64]
+    blur: NDArray[np.float64]
+    fixed_blur: NDArray[np.bool_]
 
 
-def fit_edges(windows: list[Window]) -> list[EdgeFit]:
+def fit_edges(windows: Windows) -> list[EdgeFit]:
     """Fit K error-function edges in each row, with levels and blur shared by the rows of a window.
 
     Parameters
     ----------
-    windows : list of Window
-        All with the same number of columns and of edges: they are computed side by side.
+    windows : Windows
+        Pixels and first guesses; windows are computed side by side.
 
     Returns
     -------
     list of EdgeFit
-        Positions in columns of each window's pixels.
+        Of each window; positions in columns of its pixels.
 
     Notes
     -----
     Gauss-Newton. Levels and blur are settled on a part of the rows first; then all rows are stepped once, and again
     where noise made the step a long one.
     """
-    together = int(windows[0].start.shape[1] > 1)
-    scout = _Stack(windows, stride=_SCOUT_STRIDE)
-    for _ in range(_SCOUT_STEPS[together]):
+    kind = _Single if len(windows.start) == 1 else _Joint
+    scout = kind(windows, scout=True)
+    for _ in range(kind.scout_steps):
         before = scout.blur
         scout.step()
-        if not together and np.abs(scout.blur - before).max() < _SETTLED_BLUR * before.min():
+        if np.abs(scout.blur - before).max() < kind.settled * before.min():
             break
-    stack = _Stack(windows, stride=1)
-    stack.blur, stack.shared = scout.blur, scout.shared
-    for _ in range(_FULL_STEPS[together]):
-        stack.step()
-        if stack.longest < _SHORT_STEP[together]:
+    fit = kind(windows, scout=False)
+    fit.blur, fit.shared = scout.blur, scout.shared
+    for _ in range(kind.full_steps):
+        fit.step()
+        if fit.longest < kind.settled_step:
             break
-    return stack.fits()
-
-
-class _Functions:
-    """The edge's step, slope and slope times offset at multiples of 1/PHASES px, and their inner products.
-
-    Function 0 is 1; functions 3j+1, 3j+2, 3j+3 are the step, the slope, and the slope times (x - x0) / blur of
-    edge j. Every model term is a short combination of these, so a row's normal equations are looked up, not summed.
-    """
-
-    def __init__(self, n: int, nearest: NDArray[np.int32], blur: NDArray[np.float64], group: NDArray[np.intp]) -> None:
-        k = len(nearest)
-        self.rows: list[NDArray[np.float32]] = []
-        self._gram: dict[tuple[int, int], Any] = {(0, 0): float(n)}
-        for j in range(k):
-            first, last = int(nearest[j].min()), int(nearest[j].max())
-            entry = group * (last - first + 1) + (nearest[j] - first)
-            offset = np.arange(n) * PHASES - np.arange(first, last + 1)[:, None]
-            u = (offset / (PHASES * blur[:, None, None])).reshape(-1, n)
-            slope = np.exp(-0.5 * u * u) * np.repeat(1.0 / (math.sqrt(2 * math.pi) * blur), last - first + 1)[:, None]
-            own = [ndtr(u), slope, slope * u]
-            self.rows += [f.astype(np.float32)[entry] for f in own]
-            for a in range(3):
-                self._gram[0, 3 * j + a + 1] = own[a].sum(axis=1)[entry]
-                for b in range(a, 3):
-                    self._gram[3 * j + a + 1, 3 * j + b + 1] = np.einsum("ij,ij->i", own[a], own[b])[entry]
-        for i in range(k):
-            for j in range(i + 1, k):
-                for a in range(3 * i + 1, 3 * i + 4):
-                    for b in range(3 * j + 1, 3 * j + 4):
-                        self._gram[a, b] = np.einsum("ij,ij->i", self.rows[a - 1], self.rows[b - 1])
-
-    def dots(self, residual: NDArray[np.float32]) -> list[NDArray[np.float64]]:
-        """Return the inner product of each function with each row."""
-        return [residual.sum(axis=1), *[np.einsum("ij,ij->i", f, residual) for f in self.rows]]
-
-    def product(self, one: _Term, other: _Term) -> Any:  # noqa: ANN401  (an array, or a number that stands for one)
-        """Return the inner product of two combinations of functions in each row."""
-        return sum(wa * wb * self._gram[min(a, b), max(a, b)] for a, wa in one for b, wb in other)
+    return fit.fits()
 
 
 _Term = list[tuple[int, Any]]
 
 
-class _Stack:
-    """Windows computed side by side: their rows follow each other, window by window."""
+class _Fit:
+    """Gauss-Newton on a stack of windows: positions eliminated row by row, shared terms solved block by block."""
 
-    def __init__(self, windows: list[Window], *, stride: int) -> None:
-        self.k = windows[0].start.shape[1]
-        self.sizes = [len(w.pixels[::_few(len(w.pixels), stride)]) for w in windows]
-        every = [_few(len(w.pixels), stride) for w in windows]
-        self.pixels = np.concatenate([w.pixels[::e] for w, e in zip(windows, every, strict=True)])
-        self.x = np.concatenate([w.start[::e] for w, e in zip(windows, every, strict=True)]).T.copy()
-        self.usable = np.concatenate([w.usable[::e] for w, e in zip(windows, every, strict=True)])
-        self.group = np.repeat(np.arange(len(windows)), self.sizes)
+    scout_steps: int
+    full_steps: int
+    settled: float  # change of the blur, over the blur
+    settled_step: float  # rms step of the positions, over the blur
+
+    def __init__(self, windows: Windows, *, scout: bool) -> None:
+        self.k = len(windows.start)
+        if scout:
+            every = np.maximum(np.minimum(_SCOUT_STRIDE, windows.sizes // _SCOUT_ROWS), 1)
+            starts = np.concatenate([[0], np.cumsum(windows.sizes)])
+            part = np.concatenate([
+                np.arange(first, first + size, step)
+                for first, size, step in zip(starts, windows.sizes, every, strict=False)
+            ])
+            self.sizes = -(-windows.sizes // every)
+            self.pixels, self.x, self.usable = windows.pixels[part], windows.start[:, part], windows.usable[part]
+        else:
+            self.sizes, self.pixels, self.x, self.usable = (
+                windows.sizes, windows.pixels, windows.start, windows.usable
+            )
+        self.group = np.repeat(np.arange(len(self.sizes)), self.sizes)
         self.starts = np.concatenate([[0], np.cumsum(self.sizes)])
-        self.blur = np.array([w.blur for w in windows])
-        self.free = np.array([not w.fixed_blur for w in windows])
-        self.span = np.array([np.ptp(w.levels) for w in windows])
-        self._block_rows([len(w.pixels) for w in windows])
-        self.shared = np.repeat(np.array([w.levels for w in windows], dtype=np.float64), self.blocks, axis=0)
+        self.blur, self.free = windows.blur.astype(np.float64), ~windows.fixed_blur
+        self.span = np.ptp(windows.levels, axis=1)
+        self._block_rows(windows.sizes)
+        self.shared = np.repeat(windows.levels.astype(np.float64), self.blocks, axis=0)
 
-    def _block_rows(self, full: list[int]) -> None:
+    def _block_rows(self, full: NDArray[np.intp]) -> None:
         """Cut each window into blocks, and know between which two blocks' middles each row lies."""
-        self.blocks = [max(1, round(size / ROWS_PER_BLOCK)) for size in full]
+        self.blocks = np.maximum(1, np.rint(full / ROWS_PER_BLOCK).astype(np.intp))
         first = np.concatenate([[0], np.cumsum(self.blocks)])
-        block, low, high, part = [], [], [], []
-        for size, count, start in zip(self.sizes, self.blocks, first, strict=False):
-            at = np.arange(size)
-            block.append((at * count) // size + start)
-            place = np.clip((at + 0.5) * count / size - 0.5, 0.0, count - 1.0)
-            below = np.minimum(place.astype(np.intp), max(count - 2, 0))
-            low.append(below + start)
-            high.append(np.minimum(below + 1, count - 1) + start)
-            part.append(place - below)
-        self.block = np.concatenate(block)
-        self.low, self.high = np.concatenate(low), np.concatenate(high)
-        self.part = np.concatenate(part).astype(np.float32)
+        at = np.arange(len(self.group)) - self.starts[self.group]
+        count, size = self.blocks[self.group], self.sizes[self.group]
+        self.block = (at * count) // size + first[self.group]
+        place = np.clip((at + 0.5) * (count / size) - 0.5, 0.0, count - 1.0)
+        below = np.minimum(place.astype(np.intp), np.maximum(count - 2, 0))
+        self.low = below + first[self.group]
+        self.high = np.minimum(below + 1, count - 1) + first[self.group]
+        self.part = (place - below).astype(np.float32)
         self.block_group = np.repeat(np.arange(len(full)), self.blocks)
         self.bounds = np.searchsorted(self.block, np.arange(first[-1]))
 
-    def _row_levels(self) -> NDArray[np.float32]:
-        levels = self.shared.astype(np.float32)
-        return np.asarray(levels[self.low] + self.part[:, None] * (levels[self.high] - levels[self.low])).T
+    def _row_levels(self) -> list[NDArray[np.float32]]:
+        """Levels of each row, interpolated between blocks."""
+        columns = self.shared.T.astype(np.float32)
+        return [(level[self.low] + self.part * (level[self.high] - level[self.low])) for level in columns]
 
     def _per_window(self, values: NDArray[np.float64], chosen: NDArray[np.bool_]) -> NDArray[np.float64]:
-        """Median of the chosen rows of each window."""
+        """Median of some of the chosen rows of each window."""
         result = np.empty(len(self.sizes))
-        for g in range(len(self.sizes)):
-            part = slice(self.starts[g], self.starts[g + 1])
+        for g, size in enumerate(self.sizes):
+            part = slice(self.starts[g], self.starts[g + 1], max(1, size // _MEDIAN_ROWS))
             own = values[part][chosen[part]]
             result[g] = np.median(own if len(own) else values[part])
         return result
 
+    def _look(self, nearest: NDArray[np.int32]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Linearise at `nearest`: return the positions' step, shape (K, R), and each row's squared residual after it.
+
+        Sets `inverse`, shape (K, K, R), and `gain`, how positions answer the shared terms, shape (K, K + 2, R).
+        """
+        raise NotImplementedError
+
+    def _normal(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Return the shared terms' normal matrix and right-hand side of each block, positions eliminated."""
+        raise NotImplementedError
+
     def step(self) -> None:
         """Take one Gauss-Newton step, and keep what the results need."""
-        k, n, group = self.k, self.pixels.shape[1], self.group
+        n, group = self.pixels.shape[1], self.group
         nearest = np.clip(np.rint(self.x * PHASES), -PHASES, (n + 1) * PHASES).astype(np.int32)
-        functions = _Functions(n, nearest, self.blur, group)
-        levels = self._row_levels()
-        steps = np.diff(levels, axis=0)
-        residual = self.pixels - levels[0][:, None]
-        for j in range(k):
-            residual -= steps[j][:, None] * functions.rows[3 * j]
-        dots = functions.dots(residual)
-        place: list[_Term] = [[(3 * j + 2, -steps[j])] for j in range(k)]
-        terms: list[_Term] = [[(0, 1.0), (1, -1.0)]]
-        terms += [[(3 * j + 1, 1.0), (3 * j + 4, -1.0)] for j in range(k - 1)]
-        terms += [[(3 * k - 2, 1.0)], [(3 * j + 3, -steps[j]) for j in range(k)]]
-        self.inverse = _inverse([[functions.product(a, b) for b in place] for a in place])
-        score = np.array([sum(w * dots[f] for f, w in a) for a in place])
-        move = np.einsum("ijm,jm->im", self.inverse, score)
-        # The positions are eliminated: what is left of the shared terms' normal equations is summed over rows.
-        cross = np.array([[functions.product(a, b) for b in terms] for a in place])
-        self.gain = np.einsum("ijm,jam->iam", self.inverse, cross)
-        squares = np.einsum("ij,ij->i", residual, residual) - (move * score).sum(axis=0)
-        dof = max(n - k, 1)
+        self.levels = self._row_levels()
+        self.steps = [b - a for a, b in itertools.pairwise(self.levels)]
+        move, squares = self._look(nearest)
+        dof = max(n - self.k, 1)
         typical = self._per_window(squares, self.usable)
         self.noise = np.sqrt(np.maximum(typical, 1e-12) / (dof * (1 - 2 / (9 * dof)) ** 3))
-        blur = self.blur[group]
         # A row hit by a defect has no say in what is shared.
         largest = np.maximum((1 + _MISFIT_SIGMAS * math.sqrt(2 / dof)) * self.noise**2, (_MISFIT_STEP * self.span) ** 2)
-        self.good = (squares / dof < largest[group]) & (np.abs(move) < 2 * blur + 1).all(axis=0)
-        enough = np.bincount(group, weights=self.usable & self.good) > np.bincount(group) / 4
-        self.weight = (self.usable & (self.good | ~enough[group])).astype(np.float64)
-        big = np.empty((len(self.bounds), k + 2, k + 2))
-        for a in range(k + 2):
-            for b in range(a, k + 2):
-                each = functions.product(terms[a], terms[b]) - (cross[:, a] * self.gain[:, b]).sum(axis=0)
-                big[:, a, b] = big[:, b, a] = np.add.reduceat(each * self.weight, self.bounds)
-        pull = np.stack(
-            [sum(v * dots[f] for f, v in a) - (self.gain[:, j] * score).sum(axis=0) for j, a in enumerate(terms)]
-        )
-        rows = np.add.reduceat(self.weight, self.bounds)
-        self.fit = _SharedFit(big, rows, self.block_group, self.free)
-        d_levels, d_blur = self.fit.solve(np.add.reduceat(pull * self.weight, self.bounds, axis=1).T)
+        self.good = squares < dof * largest[group]
+        blur = self.blur[group]
+        for own in move:
+            self.good &= np.abs(own) < 2 * blur + 1
+        chosen = self.usable & self.good
+        few = np.add.reduceat(chosen, self.starts[:-1]) <= self.sizes / 4
+        self.weight = np.where(few[group], self.usable, chosen) if few.any() else chosen
+        big, pull = self._normal()
+        self.shared_fit = _SharedFit(big, np.add.reduceat(self.weight, self.bounds), self.block_group, self.free)
+        d_levels, d_blur = self.shared_fit.solve(pull)
         d_blur = np.clip(d_blur, np.maximum(-0.4 * self.blur, MIN_BLUR_PX - self.blur),
                          np.minimum(0.6 * self.blur, MAX_BLUR_PX - self.blur))
-        change = np.vstack([d_levels.T[:, self.block], d_blur[group]])
-        move = np.clip(move - np.einsum("iam,am->im", self.gain, change), -1.5 * blur, 1.5 * blur)
-        self.x = nearest / PHASES + move
+        change = [*d_levels.T[:, self.block], d_blur[group]]
+        rms = 0.0
+        self.x = np.empty(self.x.shape)
+        for i in range(self.k):
+            own = move[i] - sum(self.gain[i][a] * change[a] for a in range(self.k + 2))
+            own = np.clip(own, -1.5 * blur, 1.5 * blur)
+            self.x[i] = nearest[i] / PHASES + own
+            each = np.add.reduceat(own * own * self.good, self.starts[:-1]) / np.maximum(self.sizes, 1)
+            rms = max(rms, float((np.sqrt(each) / self.blur).max()))
+        self.longest = rms
         self.shared = self.shared + d_levels
         self.blur = self.blur + d_blur
-        self.steps = steps
-        rms = np.sqrt(np.bincount(group, weights=(move**2).max(axis=0) * self.good) / np.maximum(
-            np.bincount(group, weights=self.good), 1.0))
-        self.longest = float((rms / self.blur).max())
 
     def fits(self) -> list[EdgeFit]:
         """Return each window's edges after the last step."""
         n = self.pixels.shape[1]
-        inside = ((self.x > -0.5) & (self.x < n - 0.5)).all(axis=0)  # noqa: PLR2004  (pixel borders)
-        keep = self.good & inside & (np.abs(self.steps).min(axis=0) > 0.05 * self.span[self.group])
+        keep = self.good.copy()
+        for i in range(self.k):
+            keep &= (self.x[i] > -0.5) & (self.x[i] < n - 0.5)  # noqa: PLR2004  (pixel borders)
+            keep &= np.abs(self.steps[i]) > 0.05 * self.span[self.group]
+        used = (self.weight & keep).astype(np.float64)
+        total = np.maximum(np.add.reduceat(used, self.starts[:-1]), 1.0)
+        own = np.empty((self.k, self.k, len(self.sizes)))
+        gain = np.empty((self.k, self.k + 2, len(self.bounds)))
         position = np.where(keep, self.x, np.nan)
-        used = self.weight * keep
-        total = np.maximum(np.bincount(self.group, weights=used, minlength=len(self.sizes)), 1.0)
-        own = np.add.reduceat(self.inverse * used, self.starts[:-1], axis=2) / total**2
-        mean_gain = np.add.reduceat(self.gain * used, self.bounds, axis=2) / total[self.block_group]
-        carried = self.fit.carried(mean_gain)
+        for i in range(self.k):
+            for j in range(self.k):
+                own[i, j] = np.add.reduceat(self.inverse[i][j] * used, self.starts[:-1]) / total**2
+            for a in range(self.k + 2):
+                gain[i, a] = np.add.reduceat(self.gain[i][a] * used, self.bounds) / total[self.block_group]
+        carried = self.shared_fit.carried(gain)
+        u = np.sqrt([self._per_window(self.inverse[i][i], keep) for i in range(self.k)]) * self.noise
         fits = []
         for g in range(len(self.sizes)):
-            part = slice(self.starts[g], self.starts[g + 1])
-            noise = float(self.noise[g])
-            u_row = np.sqrt(np.median(self.inverse[range(self.k), range(self.k), part], axis=1)) * noise
             # Each row's position follows its noise, which makes the aligned edge look sharper by just that variance.
-            blur = math.hypot(self.blur[g], float(u_row.mean())) if self.free[g] else float(self.blur[g])
+            blur = math.hypot(self.blur[g], float(u[:, g].mean())) if self.free[g] else float(self.blur[g])
             fits.append(
                 EdgeFit(
-                    position=position[:, part].T, u_row=u_row, blur=blur, noise=noise,
-                    u_blur=math.sqrt(self.fit.blur_var[g]) * noise,
-                    mean_covariance=(own[:, :, g] + carried[g]) * noise**2,
+                    position=position[:, self.starts[g] : self.starts[g + 1]],
+                    u_row=u[:, g],
+                    mean_covariance=(own[:, :, g] + carried[g]) * self.noise[g] ** 2,
+                    blur=blur,
+                    u_blur=math.sqrt(self.shared_fit.blur_var[g]) * float(self.noise[g]),
                     levels=self.shared[self.block_group == g],
+                    noise=float(self.noise[g]),
                 )
             )
         return fits
 
 
-def _few(rows: int, stride: int) -> int:
-    """Stride that leaves enough rows of a window for its levels and blur."""
-    return max(1, min(stride, rows // _SCOUT_ROWS))
+def _edge(u: NDArray[np.float64], blur: NDArray[np.float64] | float) -> list[NDArray[np.float64]]:
+    """Return the edge's step, slope, and slope times u, at u blurs from its middle."""
+    slope = np.exp(-0.5 * u * u) / (math.sqrt(2 * math.pi) * blur)
+    return [ndtr(u), slope, slope * u]
 
 
-def _inverse(matrix: list[list[Any]]) -> NDArray[np.float64]:
-    """Invert a small matrix of arrays, shape (k, k, m); a singular one gives small numbers, not infinite ones."""
-    floor = 1e-4 * np.median(matrix[0][0]) + 1e-12
+class _Single(_Fit):
+    """One edge a window: all that the normal equations need is looked up by the edge's place in its pixel."""
+
+    scout_steps, full_steps, settled, settled_step = 3, 3, 0.05, 0.1
+
+    def _look(self, nearest: NDArray[np.int32]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        n = self.pixels.shape[1]
+        first, last = int(nearest.min()), int(nearest.max())
+        self.entry = self.group * (last - first + 1) + (nearest[0] - first)
+        offset = np.arange(n) * PHASES - np.arange(first, last + 1)[:, None]
+        blur = self.blur[:, None, None]
+        step, slope, bend = (f.reshape(-1, n) for f in _edge(offset / (PHASES * blur), blur))
+        # Levels and blur, freed of what a shift of the edge would do as well.
+        info = np.einsum("ij,ij->i", slope, slope)
+        plain = [1.0 - step, step, bend]
+        self.share = [np.einsum("ij,ij->i", f, slope) / info for f in plain]
+        self.free_of = [f - share[:, None] * slope for f, share in zip(plain, self.share, strict=True)]
+        delta = self.steps[0]
+        self.residual = self.pixels - self.levels[0][:, None]
+        self.residual -= delta[:, None] * step.astype(np.float32)[self.entry]
+        along = np.einsum("ij,ij->i", slope.astype(np.float32)[self.entry], self.residual)
+        stiff = (1.0 / info)[self.entry]
+        answer = stiff * along
+        self.inverse = [[stiff / (delta * delta + 1e-9)]]
+        shares = [share[self.entry] for share in self.share]
+        per_step = 1.0 / np.where(np.abs(delta) > 1e-9, delta, 1e-9)  # noqa: PLR2004
+        self.gain = [[-shares[0] * per_step, -shares[1] * per_step, shares[2]]]
+        squares = np.einsum("ij,ij->i", self.residual, self.residual) - answer * along
+        return (-answer * per_step)[None], squares
+
+    def _normal(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        step = np.diff(self.shared, axis=1)[:, 0]
+        scale = [np.ones_like(step), np.ones_like(step), -step]
+        big = np.empty((len(self.bounds), 3, 3))
+        pull = np.empty((len(self.bounds), 3))
+        blank = len(self.free_of[0])
+        entry = np.where(self.weight, self.entry, blank)
+        for a in range(3):
+            dot = np.einsum("ij,ij->i", self.free_of[a].astype(np.float32)[self.entry], self.residual)
+            pull[:, a] = scale[a] * np.add.reduceat(dot * self.weight, self.bounds)
+            for b in range(a, 3):
+                each = np.append(np.einsum("ij,ij->i", self.free_of[a], self.free_of[b]), 0.0)
+                big[:, a, b] = big[:, b, a] = scale[a] * scale[b] * np.add.reduceat(each[entry], self.bounds)
+        return big, pull
+
+
+class _Joint(_Fit):
+    """Several edges a window that share their light.
+
+    Function 0 is 1; functions 3j+1, 3j+2, 3j+3 are the step, the slope, and the slope times u of edge j. Every
+    term of the model is a short combination of these.
+    """
+
+    scout_steps, full_steps, settled, settled_step = 8, 6, 0.0, 0.004
+
+    def _look(self, nearest: NDArray[np.int32]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        k, n = self.k, self.pixels.shape[1]
+        rows: list[NDArray[np.float32]] = []
+        self._gram: dict[tuple[int, int], Any] = {(0, 0): float(n)}
+        for j in range(k):
+            first, last = int(nearest[j].min()), int(nearest[j].max())
+            entry = self.group * (last - first + 1) + (nearest[j] - first)
+            offset = np.arange(n) * PHASES - np.arange(first, last + 1)[:, None]
+            blur = self.blur[:, None, None]
+            own = [f.reshape(-1, n) for f in _edge(offset / (PHASES * blur), blur)]
+            rows += [f.astype(np.float32)[entry] for f in own]
+            for a in range(3):
+                self._gram[0, 3 * j + a + 1] = own[a].sum(axis=1)[entry]
+                for b in range(a, 3):
+                    self._gram[3 * j + a + 1, 3 * j + b + 1] = np.einsum("ij,ij->i", own[a], own[b])[entry]
+        for i, j in itertools.combinations(range(k), 2):
+            for a in range(3 * i + 1, 3 * i + 4):
+                for b in range(3 * j + 1, 3 * j + 4):
+                    self._gram[a, b] = np.einsum("ij,ij->i", rows[a - 1], rows[b - 1])
+        residual = self.pixels - self.levels[0][:, None]
+        for j in range(k):
+            residual -= self.steps[j][:, None] * rows[3 * j]
+        self.dots = [residual.sum(axis=1), *[np.einsum("ij,ij->i", f, residual) for f in rows]]
+        place: list[_Term] = [[(3 * j + 2, -self.steps[j])] for j in range(k)]
+        self.terms: list[_Term] = [[(0, 1.0), (1, -1.0)]]
+        self.terms += [[(3 * j + 1, 1.0), (3 * j + 4, -1.0)] for j in range(k - 1)]
+        self.terms += [[(3 * k - 2, 1.0)], [(3 * j + 3, -self.steps[j]) for j in range(k)]]
+        self.inverse = _inverse(np.array([[self._product(a, b) for b in place] for a in place]))
+        self.score = np.array([sum(w * self.dots[f] for f, w in a) for a in place])
+        move = np.einsum("ijm,jm->im", self.inverse, self.score)
+        self.cross = np.array([[self._product(a, b) for b in self.terms] for a in place])
+        self.gain = np.einsum("ijm,jam->iam", self.inverse, self.cross)
+        return move, np.einsum("ij,ij->i", residual, residual) - (move * self.score).sum(axis=0)
+
+    def _product(self, one: _Term, other: _Term) -> Any:  # noqa: ANN401  (an array, or a number that stands for one)
+        """Return the inner product of two combinations of functions in each row."""
+        return sum(wa * wb * self._gram[min(a, b), max(a, b)] for a, wa in one for b, wb in other)
+
+    def _normal(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        count = len(self.terms)
+        big, pull = np.empty((len(self.bounds), count, count)), np.empty((len(self.bounds), count))
+        for a, term in enumerate(self.terms):
+            own = sum(v * self.dots[f] for f, v in term) - (self.gain[:, a] * self.score).sum(axis=0)
+            pull[:, a] = np.add.reduceat(own * self.weight, self.bounds)
+            for b in range(a, count):
+                each = self._product(term, self.terms[b]) - (self.cross[:, a] * self.gain[:, b]).sum(axis=0)
+                big[:, a, b] = big[:, b, a] = np.add.reduceat(each * self.weight, self.bounds)
+        return big, pull
+
+
+def _inverse(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Invert small matrices, shape (k, k, m); a singular one gives small numbers, not infinite ones."""
     k = len(matrix)
-    if k == 1:
-        return np.asarray(1.0 / (matrix[0][0] + floor))[None, None]
-    full = np.stack([np.stack(row) for row in matrix])
-    full[range(k), range(k)] += floor
-    return np.moveaxis(np.linalg.inv(np.moveaxis(full, 2, 0)), 0, 2)
+    matrix[range(k), range(k)] += 1e-4 * np.median(matrix[0, 0]) + 1e-12
+    return np.moveaxis(np.linalg.inv(np.moveaxis(matrix, 2, 0)), 0, 2)
 
 
 class _SharedFit:

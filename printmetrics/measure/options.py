@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Annotated
 
-from pydantic import BaseModel, ConfigDict, Field, FiniteFloat, model_validator
+from pydantic import BaseModel, ConfigDict, Field, FiniteFloat, ValidationInfo, field_validator, model_validator
 
 from printmetrics.quantities import CATALOGUE
 
@@ -38,21 +38,22 @@ class FeatureOptions(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
 
     name: str = Field(min_length=1, description="The feature's name, as in the tables.")
-    kind: str
+    kind: str = Field(description="What it is: one of the kinds.")
     region: tuple[FiniteFloat, FiniteFloat, Positive, Positive] | None = Field(
         None, description="x, y, width, height in um; default: the whole picture."
     )
     limits: dict[str, Limits] = Field(default_factory=dict, description="Limits by quantity.")
 
-    @model_validator(mode="after")
-    def _limits_known(self) -> FeatureOptions:
-        known = CATALOGUE[self.kind]
-        for name in self.limits:
-            if name not in known:
+    @field_validator("limits")
+    @classmethod
+    def _limits_known(cls, limits: dict[str, Limits], info: ValidationInfo) -> dict[str, Limits]:
+        known = CATALOGUE.get(info.data.get("kind", ""), {})
+        for name in limits:
+            if known and name not in known:
                 from difflib import get_close_matches  # noqa: PLC0415  (only on the way to an error)
 
                 near = get_close_matches(name, known, n=1)
                 hint = f"; did you mean {near[0]!r}?" if near else f"; known: {', '.join(known)}"
                 msg = f"unknown quantity {name!r} in the limits{hint}"
                 raise ValueError(msg)
-        return self
+        return limits

@@ -13,7 +13,7 @@ from printmetrics.measure.options import FeatureOptions, Positive
 class LinesOptions(FeatureOptions):
     """A feature of kind ``lines``."""
 
-    kind: Literal["lines"]
+    kind: Literal["lines"] = Field(description="Printed lines.")
     ink: Literal["bright", "dark"] = Field(description="Ink brighter or darker than what surrounds it.")
     direction: Literal["auto", "horizontal", "vertical"] | Annotated[FiniteFloat, Field(ge=-180, le=180)] = Field(
         "auto", description="Which way the lines run: found by itself, along an axis, or degrees from +x towards +y."
