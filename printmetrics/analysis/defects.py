@@ -157,39 +157,47 @@ def find_defects(
     return sorted(found, key=lambda d: (d.rows[0], d.x))
 
 
-def smooth_course(edge: NDArray[np.float64], coarse: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Return the course that an edge keeps but for its roughness and defects.
+def smooth_courses(edges: NDArray[np.float64], coarse: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the courses that edges keep but for their roughness and defects.
 
     Parameters
     ----------
-    edge : ndarray of float, shape (M,)
-        Column of the edge in each row; NaN where not measured. [px]
-    coarse : ndarray of float, shape (M,)
-        Course to keep beyond what was measured. [px]
+    edges : ndarray of float, shape (E, M)
+        Column of each edge in each row; NaN where not measured. [px]
+    coarse : ndarray of float, shape (E, M)
+        Courses to keep beyond what was measured. [px]
 
     Returns
     -------
-    ndarray of float, shape (M,)
-        A robust cubic through the edge. [px]
+    ndarray of float, shape (E, M)
+        Robust cubics through the edges. [px]
     """
-    known = np.nonzero(np.isfinite(edge))[0]
-    if len(known) < _FEWEST_ROWS:
-        return coarse
-    rows = known[:: max(1, len(known) // _COURSE_ROWS)]
-    scale = 2.0 / max(len(edge) - 1, 1)
-    basis = np.polynomial.legendre.legvander(rows * scale - 1.0, 3)
-    y = edge[rows]
-    weight = np.ones(len(rows))
-    fit = np.zeros(4)
+    height = edges.shape[1]
+    place = np.linspace(-1.0, 1.0, height)
+    rows = np.arange(0, height, max(1, height // _COURSE_ROWS))
+    basis = np.polynomial.legendre.legvander(place[rows], 3)
+    known = np.isfinite(edges[:, rows])
+    y = np.where(known, edges[:, rows], 0.0)
+    weight = known.astype(np.float64)
+    middle = np.maximum(known.sum(axis=1) // 2, 0)
+    fit = np.zeros((len(edges), 4))
     for terms in (2, 2, 4, 4):
         part = basis[:, :terms]
-        fit = np.zeros(4)
-        fit[:terms] = np.linalg.solve((part.T * weight) @ part + 1e-9 * np.eye(terms), part.T @ (weight * y))
-        off = np.abs(y - basis @ fit)
-        weight = (off <= _OUTLIER * float(np.median(off)) + 1e-6).astype(np.float64)
-    course = coarse.copy()
-    inner = np.arange(known[0], known[-1] + 1)  # beyond what was measured a cubic runs wild
-    course[inner] = np.polynomial.legendre.legval(inner * scale - 1.0, fit)
+        normal = (weight @ (part[:, :, None] * part[:, None, :]).reshape(len(rows), -1)).reshape(-1, terms, terms)
+        fit[:, :terms] = np.linalg.solve(normal + 1e-9 * np.eye(terms), ((weight * y) @ part)[..., None])[..., 0]
+        off = np.where(known, np.abs(y - fit @ basis.T), np.inf)
+        typical = np.sort(off, axis=1)[np.arange(len(edges)), np.minimum(middle, len(rows) - 1)]
+        weight = (off <= _OUTLIER * typical[:, None] + 1e-6) & known
+        weight = weight.astype(np.float64)
+    course = fit @ np.polynomial.legendre.legvander(place, 3).T
+    for k in range(len(edges)):
+        measured = rows[known[k]]
+        if len(measured) < _FEWEST_ROWS:
+            course[k] = coarse[k]
+            continue
+        # Beyond what was measured a cubic runs wild.
+        course[k, : measured[0]] = coarse[k, : measured[0]]
+        course[k, measured[-1] + 1 :] = coarse[k, measured[-1] + 1 :]
     return course
 
 

@@ -231,19 +231,11 @@ def _step_noise(scale: float) -> float:
 
 
 class _Chain:
-    """Pieces of successive blocks that belong together, with the edges expected next."""
+    """Pieces of successive blocks that belong together."""
 
-    def __init__(self, row: float, edges: NDArray[np.float64], slope: float) -> None:
+    def __init__(self, row: float, edges: NDArray[np.float64]) -> None:
         self.rows = [row]
         self.edges = [edges]
-        self.tip = edges
-        self.slope = slope
-
-    def add(self, row: float, edges: NDArray[np.float64], expected: NDArray[np.float64]) -> None:
-        self.slope += _FOLLOW * float((edges - expected).mean()) / (row - self.rows[-1])
-        self.rows.append(row)
-        self.edges.append(edges)
-        self.tip = 0.5 * (expected + edges)
 
     def end(self, row: float, slope: float, *, first: bool) -> NDArray[np.float64]:
         """Edges expected at a row from the nearest few blocks."""
@@ -259,29 +251,42 @@ def _distance(expected: NDArray[np.float64], seen: NDArray[np.float64], slack: f
     return np.where(worst <= np.minimum(slack + 0.15 * width, 0.5 * width + 1.5)[:, None], worst, np.inf)
 
 
+def _match(expected: NDArray[np.float64], seen: NDArray[np.float64]) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+    """Pair lines with the pieces that continue them, each piece with its nearest line."""
+    if not len(expected) or not len(seen):
+        return np.empty(0, np.intp), np.empty(0, np.intp)
+    distance = _distance(expected, seen, 2.0)
+    nearest = distance.argmin(axis=1)
+    least = distance[np.arange(len(expected)), nearest]
+    order = np.argsort(least, kind="stable")
+    order = order[np.isfinite(least[order])]
+    _, once = np.unique(nearest[order], return_index=True)
+    follow = np.sort(order[once])
+    return follow, nearest[follow]
+
+
 def _chains(pieces: list[NDArray[np.float64]], centre: NDArray[np.float64], slope: float) -> list[_Chain]:
     """Link pieces of successive blocks."""
     done: list[_Chain] = []
     live: list[_Chain] = []
+    # Of each live chain: edges expected at its last row, its last row, and its own slope.
+    tip, last, course = np.empty((0, 2)), np.empty(0), np.empty(0)
     for row, seen in zip(centre.tolist(), pieces, strict=True):
-        free = np.ones(len(seen), bool)
-        going = []
-        if live and len(seen):
-            ahead = np.array([[c.slope * (row - c.rows[-1])] for c in live])
-            expected = np.array([c.tip for c in live]) + ahead
-            distance = _distance(expected, seen, 2.0)
-            nearest = distance.argmin(axis=1).tolist()
-            least = distance.min(axis=1)
-            for k in np.argsort(least, kind="stable").tolist():
-                if least[k] < np.inf and free[nearest[k]]:
-                    free[nearest[k]] = False
-                    live[k].add(row, seen[nearest[k]], expected[k])
-                    going.append(live[k])
-                else:
-                    done.append(live[k])
-        else:
-            done += live
-        live = going + [_Chain(row, piece, slope) for piece in seen[free]]
+        expected = tip + (course * (row - last))[:, None]
+        follow, piece = _match(expected, seen)
+        going = [live[k] for k in follow]
+        done += [chain for k, chain in enumerate(live) if k not in set(follow.tolist())]
+        for chain, k in zip(going, piece.tolist(), strict=True):
+            chain.rows.append(row)
+            chain.edges.append(seen[k])
+        new = np.setdiff1d(np.arange(len(seen)), piece)
+        live = going + [_Chain(row, seen[k]) for k in new]
+        off = seen[piece] - expected[follow]
+        course = np.concatenate([
+            course[follow] + _FOLLOW * off.mean(axis=1) / (row - last[follow]), np.full(len(new), slope)
+        ])
+        tip = np.concatenate([expected[follow] + 0.5 * off, seen[new]])
+        last = np.full(len(live), row)
     return [c for c in done + live if len(c.rows) > 1]
 
 

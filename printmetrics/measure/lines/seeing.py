@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import cv2
 import numpy as np
 
-from printmetrics.analysis.defects import Defect, find_defects, ink_mask, smooth_course, smoothing
+from printmetrics.analysis.defects import Defect, find_defects, ink_mask, smooth_courses, smoothing
 from printmetrics.analysis.edges import window_half
 from printmetrics.analysis.finding import MAX_TILT_DEG, SMOOTH_PX, CoarseLine, Direction, find_direction, find_lines
 from printmetrics.analysis.tracing import Trace, trace_lines
@@ -24,7 +24,7 @@ if TYPE_CHECKING:
 
 _SMALLEST_PX = 16
 _RIVAL = 0.7  # edges along the other axis this strong leave the direction open
-_SLACK_SD = 4.5  # an edge this many sd off its course is a defect's, not rough
+_SLACK_ROWS, _SLACK_SD = 512, 4.5  # an edge this many sd off its course is a defect's, not rough
 _UNEVEN = 0.1  # a bare level that varies by this part of the contrast takes a threshold that follows it
 
 
@@ -106,7 +106,8 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
         raise _nothing(part, options, "no line was found")
     traces = [trace for _, trace in traced]
     names = _names(traces, direction, origin, sight, options)
-    course = np.array([[smooth_course(t.edges[side], t.course[side]) for side in (0, 1)] for t in traces])
+    edges, coarse = np.concatenate([t.edges for t in traces]), np.concatenate([t.course for t in traces])
+    course = smooth_courses(edges, coarse).reshape(len(traces), 2, -1)
     ink = _ink(image, traces, bright=options.ink == "bright")
     defects, hit = _defects(ink, course, traces)
     return Seen(
@@ -230,7 +231,7 @@ def _slack(course: NDArray[np.float64], traces: list[Trace]) -> NDArray[np.float
     slack = np.empty((len(traces), 2))
     for k, trace in enumerate(traces):
         for side in (0, 1):
-            off = np.abs(trace.edges[side] - course[k, side])
+            off = np.abs(trace.edges[side] - course[k, side])[:: max(1, trace.edges.shape[1] // _SLACK_ROWS)]
             sd = 1.4826 * float(np.median(off[np.isfinite(off)]))
             slack[k, side] = max(2.0, 1.5 * float(trace.blur[side]), _SLACK_SD * sd)
         slack[k] = np.minimum(slack[k], float(np.median(course[k, 1] - course[k, 0])) / 3)
