@@ -44,6 +44,7 @@ STYLE: dict[str, tuple[str, Colour]] = {
 }
 WORST_FIRST = tuple(STYLE)
 MOST_LISTED = 5
+MOST_NAMED = 20
 
 
 def draw_picture(image: NDArray[Any], inspection: Inspection, title: str) -> NDArray[np.uint8]:
@@ -199,7 +200,8 @@ def _draw_shapes(canvas: NDArray[np.uint8], inspection: Inspection, place: _Plac
                 _polyline(canvas, points, (0, 0, 0), thick + 2)
             _polyline(canvas, points, colour, thick)
     taken: list[Box] = []
-    for event in inspection.events:
+    largest = sorted(inspection.events, key=lambda event: -event["area"])[:MOST_NAMED]
+    for event in largest:
         centre = place(np.array([event["x_px"], event["y_px"]]))
         _event_name(canvas, event, centre, text, taken)
 
@@ -346,7 +348,8 @@ def _header(inspection: Inspection, title: str, width: int, text: float) -> NDAr
     for verdict in ("conforming", "undecided", "nonconforming"):
         sign, colour = STYLE[verdict]
         lines[1].append((f"{counts[verdict]} {verdict} ({sign})", colour if counts[verdict] else GREY))
-    lines[1].append((f"defects: {len(inspection.events)}", WHITE if inspection.events else GREY))
+    some = f" ({MOST_NAMED} largest named)" if len(inspection.events) > MOST_NAMED else ""
+    lines[1].append((f"defects: {len(inspection.events)}{some}", WHITE if inspection.events else GREY))
     for feature, reason in inspection.failures.items():
         lines += [[(piece, STYLE["undecided"][1])] for piece in _wrapped(f"{feature}: {reason}", width, text)]
     lines += [[(_row_words(row), STYLE[row["verdict"]][1])] for row in bad[:MOST_LISTED]]
@@ -383,7 +386,9 @@ def _wrapped(text: str, width: int, scale: float) -> list[str]:
     """Break a text into lines of a width. [px]."""
     import textwrap  # noqa: PLC0415
 
-    per_line = max(20, int(len(text) * (width - 12) / max(1, _extent(text, scale)[0])))
+    per_line = max(
+        20, int(0.93 * len(text) * (width - 12) / max(1, _extent(text, scale)[0]))
+    )  # letters differ in width
     return textwrap.wrap(text, per_line, max_lines=4, placeholder=" ...")
 
 

@@ -82,7 +82,7 @@ def test_float_picture_without_a_single_finite_pixel_is_drawn() -> None:
 
 def test_names_in_any_script_are_drawn_with_a_question_mark_for_each_foreign_letter() -> None:
     failed = Inspection(failures={"линия": "не найдена \n"}, scale=Scale.pixels())
-    event = {"feature": "f", "item": "L1", "event": "新", "x_px": 5.0, "y_px": 5.0}
+    event = {"feature": "f", "item": "L1", "event": "新", "x_px": 5.0, "y_px": 5.0, "area": 1.0}
     image = np.zeros((60, 60), np.uint8)
     named = draw_picture(image, Inspection(events=[event], failures=failed.failures), "図.png")
     assert np.array_equal(named, draw_picture(image, Inspection(events=[event], failures=failed.failures), "?.png"))
@@ -94,11 +94,20 @@ def test_event_is_outlined_and_named() -> None:
     outline = Shape(
         item="L1", role="event:neck", points_px=np.stack([200 + 20 * np.cos(turn), 200 + 20 * np.sin(turn)], 1)
     )
-    event = {"feature": "bus", "item": "L1", "event": "neck", "x_px": 200.0, "y_px": 200.0}
+    event = {"feature": "bus", "item": "L1", "event": "neck", "x_px": 200.0, "y_px": 200.0, "area": 1.0}
     plain = draw_picture(image, Inspection(scale=SCALE), "x")
     drawn = draw_picture(image, Inspection(shapes=[("bus", outline)], events=[event], scale=SCALE), "x")
     white = _coloured(drawn, (255, 255, 255)) & ~_coloured(plain, (255, 255, 255))
     assert 100 < np.count_nonzero(white) < 3000
+
+
+def test_of_very_many_events_the_largest_are_named() -> None:
+    image = np.zeros((900, 900), np.uint8)
+    drop = {"feature": "bus", "item": "L1", "event": "satellite"}
+    events = [drop | {"x_px": 30.0 * (n % 30), "y_px": 30.0 * (n // 30), "area": float(n)} for n in range(900)]
+    many = draw_picture(image, Inspection(events=events, scale=SCALE), "x")
+    few = draw_picture(image, Inspection(events=events[-20:], scale=SCALE), "x")
+    assert np.array_equal(many[100:], few[100:])
 
 
 def test_shapes_broken_by_nan_are_drawn_in_pieces() -> None:
