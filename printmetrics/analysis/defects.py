@@ -12,7 +12,7 @@ import numpy as np
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-_FEWEST_ROWS, _COURSE_ROWS = 8, 512  # a cubic and its scatter need the one, and gain nothing beyond the other
+_FEWEST_ROWS, _COURSE_ROWS = 8, 256  # a cubic and its scatter need the one, and gain nothing beyond the other
 _OUTLIER = 5.2  # median deviations: 3.5 sd
 _STAND_OUT = 10.0  # half the contrast stands five noise sds out of the smoothed picture
 
@@ -137,23 +137,24 @@ def find_defects(
     An open is bare web that joins both sides of a line, a bridge is ink that joins two lines: both are judged on
     the whole mask around the finding, so a film of half contrast or a crack much finer than the blur isn't seen.
     """
-    drawn = np.zeros_like(ink)
-    for k in range(len(left)):
-        _fill(drawn, left[k] - slack[k, 0], right[k] + slack[k, 1])
-    far = np.full(left.shape[1], float(ink.shape[1]))
-    _fill(drawn, -far, left[0] - slack[0, 0] - margin)
-    _fill(drawn, right[-1] + slack[-1, 1] + margin, far)
-    excess = cv2.compare(ink, drawn, cv2.CMP_GT)
-    drawn[:] = 0
-    for k in range(len(left)):
-        _fill(drawn, np.where(way[k], left[k] + slack[k, 0], np.nan), right[k] - slack[k, 1])
-    bare = cv2.compare(drawn, ink, cv2.CMP_GT)
-    del drawn
     found: list[Defect] = []
-    for mask, missing in ((bare, True), (excess, False)):
-        for box, inside in _components(mask, least_area):
-            look = _Look(ink, left, right, slack, box, inside, missing=missing)
-            found.append(look.defect())
+    drawn = np.zeros_like(ink)
+    far = np.full(left.shape[1], float(ink.shape[1]))
+    for missing in (False, True):
+        # One buffer serves both: what is drawn is ink that may be there, then ink that must be there.
+        drawn[:] = 0
+        sign = -1.0 if missing else 1.0
+        for k in range(len(left)):
+            a, b = left[k] - sign * slack[k, 0], right[k] + sign * slack[k, 1]
+            _fill(drawn, np.where(way[k], a, np.nan) if missing else a, b)
+        if missing:
+            cv2.compare(drawn, ink, cv2.CMP_GT, drawn)
+        else:
+            _fill(drawn, -far, left[0] - slack[0, 0] - margin)
+            _fill(drawn, right[-1] + slack[-1, 1] + margin, far)
+            cv2.compare(ink, drawn, cv2.CMP_GT, drawn)
+        for box, inside in _components(drawn, least_area):
+            found.append(_Look(ink, left, right, slack, box, inside, missing=missing).defect())
     return sorted(found, key=lambda d: (d.rows[0], d.x))
 
 
@@ -206,7 +207,7 @@ def _fill(mask: NDArray[Any], a: NDArray[np.float64], b: NDArray[np.float64]) ->
     known = np.isfinite(a) & np.isfinite(b) & (b > a)
     if not known.any():
         return
-    step = max(1, len(a) // 1024)
+    step = max(1, len(a) // _COURSE_ROWS)
     rows = np.nonzero(known)[0]
     rows = rows[(np.arange(len(rows)) % step == 0) | (rows == rows[-1])]
     outline = np.concatenate([

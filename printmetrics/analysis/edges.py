@@ -23,6 +23,7 @@ MIN_BLUR_PX, MAX_BLUR_PX = 0.35, 40.0
 _REACH = 4.0  # window beyond the edge, in blurs
 _SCOUT_STRIDE, _SCOUT_ROWS = 8, 256  # levels and blur are settled on so many of the rows first
 _MEDIAN_ROWS = 400  # enough for a typical value
+_RUN = 2048  # rows whose tables stay in the processor's cache
 _FEWEST_ROWS = 8  # a block with fewer good rows has no levels of its own
 _MISFIT_SIGMAS = 6.0  # a row is a defect's when its residual stands out of the noise by this much,
 _MISFIT_STEP = 0.1  # and its rms is this part of the step: a rough edge alone leaves less
@@ -264,6 +265,8 @@ class _Fit:
         self.part = (place - below).astype(np.float32)
         self.block_group = np.repeat(np.arange(len(full)), self.blocks)
         self.bounds = np.searchsorted(self.block, np.arange(first[-1]))
+        few = np.arange(min(_MEDIAN_ROWS, int(self.sizes.max())))
+        self.typical_rows = self.starts[:-1, None] + (few * self.sizes[:, None]) // len(few)
 
     def _row_levels(self) -> list[NDArray[np.float32]]:
         """Levels of each row, interpolated between blocks."""
@@ -271,13 +274,14 @@ class _Fit:
         return [(level[self.low] + self.part * (level[self.high] - level[self.low])) for level in columns]
 
     def _per_window(self, values: NDArray[np.float64], chosen: NDArray[np.bool_]) -> NDArray[np.float64]:
-        """Median of some of the chosen rows of each window."""
-        result = np.empty(len(self.sizes))
-        for g, size in enumerate(self.sizes):
-            part = slice(self.starts[g], self.starts[g + 1], max(1, size // _MEDIAN_ROWS))
-            own = values[part][chosen[part]]
-            result[g] = np.median(own if len(own) else values[part])
-        return result
+        """Median of some of the chosen rows of each window; of any rows where none is chosen."""
+        at = self.typical_rows
+        known = chosen[at]
+        known |= ~known.any(axis=1, keepdims=True)
+        ordered = np.sort(np.where(known, values[at], np.inf), axis=1)
+        count = known.sum(axis=1)
+        each = np.arange(len(at))
+        return np.asarray((ordered[each, (count - 1) // 2] + ordered[each, count // 2]) / 2)
 
     def _look(self, nearest: NDArray[np.int32]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Linearise at `nearest`: return the positions' step, shape (K, R), and each row's squared residual after it.
@@ -314,7 +318,7 @@ class _Fit:
         d_levels, d_blur = self.shared_fit.solve(pull)
         d_blur = np.clip(d_blur, np.maximum(-0.4 * self.blur, MIN_BLUR_PX - self.blur),
                          np.minimum(0.6 * self.blur, MAX_BLUR_PX - self.blur))
-        change = [*d_levels.T[:, self.block], d_blur[group]]
+        change = [*(own[self.block] for own in d_levels.T.copy()), d_blur[group]]
         rms = 0.0
         self.x = np.empty(self.x.shape)
         for i in range(self.k):
@@ -385,34 +389,45 @@ class _Single(_Fit):
         # Levels and blur, freed of what a shift of the edge would do as well.
         info = np.einsum("ij,ij->i", slope, slope)
         plain = [1.0 - step, step, bend]
-        self.share = [np.einsum("ij,ij->i", f, slope) / info for f in plain]
-        self.free_of = [f - share[:, None] * slope for f, share in zip(plain, self.share, strict=True)]
+        share = [np.einsum("ij,ij->i", f, slope) / info for f in plain]
+        freed = [f - own[:, None] * slope for f, own in zip(plain, share, strict=True)]
+        self.gram = {(a, b): np.einsum("ij,ij->i", freed[a], freed[b]) for a in range(3) for b in range(a, 3)}
         delta = self.steps[0]
-        self.residual = self.pixels - self.levels[0][:, None]
-        self.residual -= delta[:, None] * step.astype(np.float32)[self.entry]
-        along = np.einsum("ij,ij->i", slope.astype(np.float32)[self.entry], self.residual)
+        self.dots, squares = self._dots(np.stack([step, slope, *freed], axis=1).astype(np.float32))
         stiff = (1.0 / info)[self.entry]
-        answer = stiff * along
+        answer = stiff * self.dots[0]
         self.inverse = [[stiff / (delta * delta + 1e-9)]]
-        shares = [share[self.entry] for share in self.share]
-        per_step = 1.0 / np.where(np.abs(delta) > 1e-9, delta, 1e-9)  # noqa: PLR2004
-        self.gain = [[-shares[0] * per_step, -shares[1] * per_step, shares[2]]]
-        squares = np.einsum("ij,ij->i", self.residual, self.residual) - answer * along
-        return (-answer * per_step)[None], squares
+        per_step = 1.0 / np.where(np.abs(delta) > 1e-9, delta, 1e-9)  # noqa: PLR2004  (no step, no division)
+        self.gain = [[-share[0][self.entry] * per_step, -share[1][self.entry] * per_step, share[2][self.entry]]]
+        return (-answer * per_step)[None], squares - answer * self.dots[0]
+
+    def _dots(self, functions: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+        """Return inner products of the residual with all functions but the first, shape (4, R), and its square.
+
+        In runs of rows that stay in the processor's cache.
+        """
+        dots = np.empty((functions.shape[1] - 1, len(self.entry)), np.float32)
+        squares = np.empty(len(self.entry), np.float32)
+        for first in range(0, len(self.entry), _RUN):
+            run = slice(first, first + _RUN)
+            table = np.take(functions, self.entry[run], axis=0)
+            residual = self.pixels[run] - self.levels[0][run, None]
+            residual -= self.steps[0][run, None] * table[:, 0]
+            np.einsum("ikj,ij->ki", table[:, 1:], residual, out=dots[:, run])
+            np.einsum("ij,ij->i", residual, residual, out=squares[run])
+        return dots, squares
 
     def _normal(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         step = np.diff(self.shared, axis=1)[:, 0]
         scale = [np.ones_like(step), np.ones_like(step), -step]
         big = np.empty((len(self.bounds), 3, 3))
         pull = np.empty((len(self.bounds), 3))
-        blank = len(self.free_of[0])
-        entry = np.where(self.weight, self.entry, blank)
+        entry = np.where(self.weight, self.entry, len(self.gram[0, 0]))  # the last entry is empty
         for a in range(3):
-            dot = np.einsum("ij,ij->i", self.free_of[a].astype(np.float32)[self.entry], self.residual)
-            pull[:, a] = scale[a] * np.add.reduceat(dot * self.weight, self.bounds)
+            pull[:, a] = scale[a] * np.add.reduceat(self.dots[a + 1] * self.weight, self.bounds, dtype=np.float64)
             for b in range(a, 3):
-                each = np.append(np.einsum("ij,ij->i", self.free_of[a], self.free_of[b]), 0.0)
-                big[:, a, b] = big[:, b, a] = scale[a] * scale[b] * np.add.reduceat(each[entry], self.bounds)
+                each = np.append(self.gram[a, b], 0.0)[entry]
+                big[:, a, b] = big[:, b, a] = scale[a] * scale[b] * np.add.reduceat(each, self.bounds)
         return big, pull
 
 

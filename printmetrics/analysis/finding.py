@@ -13,12 +13,13 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 MAX_TILT_DEG = 30.0
-_BAND_ROWS, _BANDS, _BAND_PIXELS = 10, (4, 32), 200_000  # the direction is taken from this much of a large picture
+_BAND_ROWS, _BANDS, _BAND_PIXELS = 8, (3, 32), 150_000  # the direction is taken from this much of a large picture
 _SPREAD_DEG = 8  # a line that wanders shows its course in a range of angles
 _BLOCKS = 48  # so many blocks along the lines, where there are rows enough
 _BLOCK_ROWS = 2, 64
 _ROWS_USED = 8  # of each block, enough to lift a line out of the noise
 SMOOTH_PX = (1.0, 3.0)  # the second is tried where the first finds nothing: strong blur in strong noise
+_NOISE_PIXELS = 20_000
 _NOISE_SIGMAS = 6.0  # a step counts when it stands out of the noise by this much
 _RELATIVE_STEP = 0.12  # and is at least this part of the picture's strong steps
 _FOLLOW = 0.3  # how fast a chain follows a line that wanders
@@ -198,7 +199,8 @@ def _pieces(profiles: NDArray[np.float32], scale: float, *, bright: bool) -> lis
     if not bright:
         step = -step
     # The noise of the difference of two means, from the differences between neighbouring blocks' pixels.
-    rough = np.diff(profiles, axis=1)
+    every = max(1, profiles.size // _NOISE_PIXELS)
+    rough = profiles[:, 1::every] - profiles[:, :-1:every]
     noise = 1.4826 * float(np.median(np.abs(rough - np.median(rough)))) / math.sqrt(2) * _step_noise(scale)
     size = np.abs(step)
     strong = float(np.percentile(size.max(axis=1), 50))
