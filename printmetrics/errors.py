@@ -40,4 +40,3 @@ class FeatureError(PrintmetricsError):
         super().__init__(message)
         self.count = count
         self.flags = flags if flags is not None else Flag.OUTSIDE_VALIDITY
-

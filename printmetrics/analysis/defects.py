@@ -210,9 +210,9 @@ def _fill(mask: NDArray[Any], a: NDArray[np.float64], b: NDArray[np.float64]) ->
     step = max(1, len(a) // _COURSE_ROWS)
     rows = np.nonzero(known)[0]
     rows = rows[(np.arange(len(rows)) % step == 0) | (rows == rows[-1])]
-    outline = np.concatenate([
-        np.column_stack([np.ceil(a[rows]), rows]), np.column_stack([np.floor(b[rows]), rows])[::-1]
-    ])
+    outline = np.concatenate(
+        [np.column_stack([np.ceil(a[rows]), rows]), np.column_stack([np.floor(b[rows]), rows])[::-1]]
+    )
     cv2.fillPoly(mask, [np.rint(outline).astype(np.int32)], 255)
 
 
@@ -221,7 +221,9 @@ def _components(mask: NDArray[Any], least_area: float) -> list[tuple[tuple[int, 
     if not cv2.countNonZero(mask):
         return []
     x, y, w, h = cv2.boundingRect(mask)
-    _, labels, stats, _ = cv2.connectedComponentsWithStats(np.ascontiguousarray(mask[y : y + h, x : x + w]), connectivity=8)
+    _, labels, stats, _ = cv2.connectedComponentsWithStats(
+        np.ascontiguousarray(mask[y : y + h, x : x + w]), connectivity=8
+    )
     found = []
     for k in np.nonzero(stats[1:, cv2.CC_STAT_AREA] >= least_area)[0] + 1:
         bx, by, bw, bh = (int(v) for v in stats[k, :4])
@@ -234,8 +236,15 @@ class _Look:
     """A closer look at one finding: what it touches."""
 
     def __init__(
-        self, ink: NDArray[Any], left: NDArray[np.float64], right: NDArray[np.float64], slack: NDArray[np.float64],
-        box: tuple[int, int, int, int], inside: NDArray[np.bool_], *, missing: bool,
+        self,
+        ink: NDArray[Any],
+        left: NDArray[np.float64],
+        right: NDArray[np.float64],
+        slack: NDArray[np.float64],
+        box: tuple[int, int, int, int],
+        inside: NDArray[np.bool_],
+        *,
+        missing: bool,
     ) -> None:
         self.box, self.inside, self.missing = box, inside, missing
         x, y, w, h = box
@@ -276,8 +285,11 @@ class _Look:
         """Name it."""
         x, y, _, h = self.box
         both, one = self.left and self.right, self.left or self.right
-        kind = ("open" if both else "neck" if one else "void") if self.missing else (
-            "bridge" if both else "bulge" if one else "satellite")
+        kind = (
+            ("open" if both else "neck" if one else "void")
+            if self.missing
+            else ("bridge" if both else "bulge" if one else "satellite")
+        )
         body = self.whole if self.whole.any() else self.inside
         shift = self.low if self.whole.any() else x
         rows, columns = np.nonzero(body)
@@ -287,7 +299,14 @@ class _Look:
             extent = float(inner[inner > 0].min())
         contour = max(cv2.findContours(body.astype(np.uint8), cv2.RETR_EXTERNAL, cv2.CHAIN_APPROX_SIMPLE)[0], key=len)
         return Defect(
-            kind=kind, line=self.line, left=self.left, right=self.right, rows=(y, y + h - 1),
-            x=float(columns.mean() + shift), y=float(rows.mean() + y), extent=extent,
-            area=float(body.sum()), outline=contour[:, 0].astype(np.float64) + (shift, y),
+            kind=kind,
+            line=self.line,
+            left=self.left,
+            right=self.right,
+            rows=(y, y + h - 1),
+            x=float(columns.mean() + shift),
+            y=float(rows.mean() + y),
+            extent=extent,
+            area=float(body.sum()),
+            outline=contour[:, 0] + np.array([shift, y], dtype=np.float64),
         )

@@ -150,7 +150,7 @@ def gather(image: NDArray[Any], rows: NDArray[np.intp], first: NDArray[np.intp],
         Pixels. [counts]
     """
     runs = np.lib.stride_tricks.sliding_window_view(image.reshape(-1), n)
-    return runs[rows * image.shape[1] + first].astype(np.float32)
+    return np.asarray(runs[rows * image.shape[1] + first], dtype=np.float32)
 
 
 @dataclass(slots=True, kw_only=True)
@@ -228,21 +228,28 @@ class _Fit:
     full_steps: int
     settled: float  # change of the blur, over the blur
     settled_step: float  # rms step of the positions, over the blur
+    inverse: Any  # of the positions' information, [K][K] arrays over rows
+    gain: Any  # how positions answer the shared terms, [K][K + 2] arrays over rows
 
     def __init__(self, windows: Windows, *, scout: bool) -> None:
         self.k = len(windows.start)
         if scout:
             every = np.maximum(np.minimum(_SCOUT_STRIDE, windows.sizes // _SCOUT_ROWS), 1)
             starts = np.concatenate([[0], np.cumsum(windows.sizes)])
-            part = np.concatenate([
-                np.arange(first, first + size, step)
-                for first, size, step in zip(starts, windows.sizes, every, strict=False)
-            ])
+            part = np.concatenate(
+                [
+                    np.arange(first, first + size, step)
+                    for first, size, step in zip(starts, windows.sizes, every, strict=False)
+                ]
+            )
             self.sizes = -(-windows.sizes // every)
             self.pixels, self.x, self.usable = windows.pixels[part], windows.start[:, part], windows.usable[part]
         else:
             self.sizes, self.pixels, self.x, self.usable = (
-                windows.sizes, windows.pixels, windows.start, windows.usable
+                windows.sizes,
+                windows.pixels,
+                windows.start,
+                windows.usable,
             )
         self.group = np.repeat(np.arange(len(self.sizes)), self.sizes)
         self.starts = np.concatenate([[0], np.cumsum(self.sizes)])
@@ -316,8 +323,11 @@ class _Fit:
         big, pull = self._normal()
         self.shared_fit = _SharedFit(big, np.add.reduceat(self.weight, self.bounds), self.block_group, self.free)
         d_levels, d_blur = self.shared_fit.solve(pull)
-        d_blur = np.clip(d_blur, np.maximum(-0.4 * self.blur, MIN_BLUR_PX - self.blur),
-                         np.minimum(0.6 * self.blur, MAX_BLUR_PX - self.blur))
+        d_blur = np.clip(
+            d_blur,
+            np.maximum(-0.4 * self.blur, MIN_BLUR_PX - self.blur),
+            np.minimum(0.6 * self.blur, MAX_BLUR_PX - self.blur),
+        )
         change = [*(own[self.block] for own in d_levels.T.copy()), d_blur[group]]
         rms = 0.0
         self.x = np.empty(self.x.shape)
@@ -490,11 +500,11 @@ class _Joint(_Fit):
         return big, pull
 
 
-def _inverse(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
+def _inverse(matrix: NDArray[Any]) -> NDArray[np.float64]:
     """Invert small matrices, shape (k, k, m); a singular one gives small numbers, not infinite ones."""
     k = len(matrix)
     matrix[range(k), range(k)] += 1e-4 * np.median(matrix[0, 0]) + 1e-12
-    return np.moveaxis(np.linalg.inv(np.moveaxis(matrix, 2, 0)), 0, 2)
+    return np.asarray(np.moveaxis(np.linalg.inv(np.moveaxis(matrix, 2, 0)), 0, 2))
 
 
 class _SharedFit:
@@ -515,7 +525,7 @@ class _SharedFit:
     def solve(self, pull: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Return the change of each block's levels, and of each window's blur."""
         left = pull[:, -1] - np.einsum("ba,ba->b", pull[:, :-1], self.to_blur)
-        change = self.blur_var * np.bincount(self.group, weights=left)
+        change: NDArray[np.float64] = self.blur_var * np.bincount(self.group, weights=left)
         levels = np.einsum("bac,bc->ba", self.levels_cov, pull[:, :-1]) - self.to_blur * change[self.group][:, None]
         return levels, change
 

@@ -115,7 +115,7 @@ def _angle_votes(part: NDArray[np.float32], smooth: float) -> NDArray[np.float64
     noise = float(np.median(power))
     strong = power > 6 * noise
     angle = np.degrees(np.arctan2(gy[strong], gx[strong])) % 180
-    return np.bincount(np.rint(angle).astype(int) % 180, weights=power[strong], minlength=180)
+    return np.asarray(np.bincount(np.rint(angle).astype(int) % 180, weights=power[strong], minlength=180), np.float64)
 
 
 def block_profiles(image: NDArray[Any], slope: float, rows: int) -> tuple[NDArray[np.float32], NDArray[np.float64]]:
@@ -149,12 +149,10 @@ def block_profiles(image: NDArray[Any], slope: float, rows: int) -> tuple[NDArra
         target = total[:, low:high]
         target += part[:, low + shift : high + shift]
         seen[low:high] += 1
-    return total / np.maximum(seen, 1), np.arange(count) * rows + (rows - 1) / 2
+    return (total / np.maximum(seen, 1)).astype(np.float32), np.arange(count) * rows + (rows - 1) / 2
 
 
-def find_lines(
-    image: NDArray[Any], slope: float, *, bright: bool, smooth: float = SMOOTH_PX[0]
-) -> list[CoarseLine]:
+def find_lines(image: NDArray[Any], slope: float, *, bright: bool, smooth: float = SMOOTH_PX[0]) -> list[CoarseLine]:
     """Find the lines that run along the columns.
 
     Parameters
@@ -284,9 +282,9 @@ def _chains(pieces: list[NDArray[np.float64]], centre: NDArray[np.float64], slop
         new = np.setdiff1d(np.arange(len(seen)), piece)
         live = going + [_Chain(row, seen[k]) for k in new]
         off = seen[piece] - expected[follow]
-        course = np.concatenate([
-            course[follow] + _FOLLOW * off.mean(axis=1) / (row - last[follow]), np.full(len(new), slope)
-        ])
+        course = np.concatenate(
+            [course[follow] + _FOLLOW * off.mean(axis=1) / (row - last[follow]), np.full(len(new), slope)]
+        )
         tip = np.concatenate([expected[follow] + 0.5 * off, seen[new]])
         last = np.full(len(live), row)
     return [c for c in done + live if len(c.rows) > 1]

@@ -25,7 +25,7 @@ _SMOOTH_EDGE = 0.35  # an edge that strays less from its coarse course, in blurs
 _KNOWN_BLUR = 5.0  # narrower than this many blurs, a line takes its blur from wider ones where there are any
 _PASSES = 5  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
-_SHAPE_ROWS = 256  # the edge's shape and other typical values are judged on so many rows
+_SHAPE_ROWS = 128  # the edge's shape and other typical values are judged on so many rows
 _BESIDE, _CORE = (1.3, 2.6), 0.6  # blurs from the edge's middle: where sharpening overshoots, and its core
 _FEWEST_ROWS = 16
 
@@ -143,7 +143,7 @@ class _Tracer:
     def _spaces(self) -> NDArray[np.float64]:
         """Space left and right of each line."""
         gaps = np.full((len(self.course), 2), float(self.width))
-        between = self.course[1:, 0, ::_sparse(self.height)] - self.course[:-1, 1, ::_sparse(self.height)]
+        between = self.course[1:, 0, :: _sparse(self.height)] - self.course[:-1, 1, :: _sparse(self.height)]
         gaps[:-1, 1] = gaps[1:, 0] = np.maximum(np.median(between, axis=1), 1.0)
         return gaps
 
@@ -300,7 +300,9 @@ class _Tracer:
             if usable.sum() >= _FEWEST_ROWS and np.ptp(self._levels_of(cut)) > 0:
                 alike.setdefault((cut.n, len(cut.edges)), []).append(cut)
         for (n, _), group in alike.items():
-            pixels = gather(self.image, np.concatenate([c.rows for c in group]), np.concatenate([c.first for c in group]), n)
+            pixels = gather(
+                self.image, np.concatenate([c.rows for c in group]), np.concatenate([c.first for c in group]), n
+            )
             sizes = np.array([len(c.rows) for c in group])
             end = np.cumsum(sizes)
             for cut, last, size in zip(group, end, sizes, strict=True):
@@ -310,7 +312,9 @@ class _Tracer:
             fits = fit_edges(
                 Windows(
                     pixels=pixels,
-                    start=np.concatenate([np.stack([self._place(e)[c.rows] for e in c.edges]) - c.first for c in group], axis=1),
+                    start=np.concatenate(
+                        [np.stack([self._place(e)[c.rows] for e in c.edges]) - c.first for c in group], axis=1
+                    ),
                     usable=np.concatenate([self.usable[c.own[0][0]][c.rows] for c in group]),
                     sizes=sizes,
                     levels=np.array([self._levels_of(c) for c in group]),
@@ -330,14 +334,16 @@ class _Tracer:
     def _place(self, edge: tuple[int, int]) -> NDArray[np.float64]:
         """Where an edge is in each row, as far as known."""
         own = self.edges[edge]
-        return np.where(np.isfinite(own), own, self.course[edge])
+        return np.asarray(np.where(np.isfinite(own), own, self.course[edge]))
 
     def _others(self, cut: _Cut) -> NDArray[np.float32] | None:
         """Light that edges near by, which the fit doesn't hold, bring into its window beyond the plateau next to it."""
         (k, side), (last, last_side) = cut.own[0], cut.own[-1]
         reach = cut.n + 5 * cut.blur
-        if self.space[k, 0] > reach and self.space[last, 1] > reach and (
-            side != last_side or self.line_width[k] > reach
+        if (
+            self.space[k, 0] > reach
+            and self.space[last, 1] > reach
+            and (side != last_side or self.line_width[k] > reach)
         ):
             return None
         extra: NDArray[np.float64] | None = None
@@ -382,10 +388,19 @@ class _Tracer:
         course = self.course[k]
         return Trace(
             way=(course[0] > 0) & (course[0] < self.width - 1) & (course[1] > 0) & (course[1] < self.width - 1),
-            course=course, edges=edges, u_row=u_row, covariance=covariance, blur=self.blurs[k], u_blur=u_blur,
-            ink=float(np.median(np.concatenate(ink))), bare=float(np.median(np.concatenate(bare))),
-            bare_range=float(np.ptp(np.concatenate(bare))), middle_level=(ink[0] + bare[0]) / 2,
-            noise=float(np.mean(noise)), overshoot=float(np.mean(over)), shape_shift=shift,
+            course=course,
+            edges=edges,
+            u_row=u_row,
+            covariance=covariance,
+            blur=self.blurs[k],
+            u_blur=u_blur,
+            ink=float(np.median(np.concatenate(ink))),
+            bare=float(np.median(np.concatenate(bare))),
+            bare_range=float(np.ptp(np.concatenate(bare))),
+            middle_level=(ink[0] + bare[0]) / 2,
+            noise=float(np.mean(noise)),
+            overshoot=float(np.mean(over)),
+            shape_shift=shift,
         )
 
     @staticmethod
@@ -425,7 +440,7 @@ def _course(rows: NDArray[np.float64], edge: NDArray[np.float64], height: int) -
     slope = [_slope(rows[part], edge[part]) if n > 1 else 0.0 for part in (slice(n), slice(-n, None))]
     ends = [edge[0] - slope[0] * rows[0], edge[-1] + slope[1] * (height - 1 - rows[-1])]
     known = np.concatenate([[0.0], rows, [height - 1.0]]), np.concatenate([ends[:1], edge, ends[1:]])
-    return np.interp(np.arange(height), *known)
+    return np.asarray(np.interp(np.arange(height), *known))
 
 
 def _slope(x: NDArray[np.float64], y: NDArray[np.float64]) -> float:

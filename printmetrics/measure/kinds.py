@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from printmetrics.measure import lines
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from printmetrics.measure.options import FeatureOptions
     from printmetrics.measure.readings import Measured
     from printmetrics.measure.sight import Sight
@@ -31,8 +32,8 @@ class Kind:
     """
 
     options: type[FeatureOptions]
-    measure: Callable[[Sight, FeatureOptions], Measured]
-    expected_items: Callable[[FeatureOptions], dict[str, tuple[str, ...]]]
+    measure: Callable[[Sight, Any], Measured]
+    expected_items: Callable[[Any], dict[str, tuple[str, ...]]]
     count: str
 
 

@@ -102,9 +102,7 @@ def straighten(points: NDArray[np.float64], slope: float, pitch: float) -> Strai
         edge, transfer = _on_grid(s[k][valid[k]], t[k][valid[k]], grid, step)
         edges.append(edge)
         transfers.append(transfer)
-    return Straightened(
-        s=grid, left=edges[0], right=edges[1], step=step, slope=slope, transfer=np.array(transfers)
-    )
+    return Straightened(s=grid, left=edges[0], right=edges[1], step=step, slope=slope, transfer=np.array(transfers))
 
 
 def _on_grid(

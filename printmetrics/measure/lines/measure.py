@@ -100,7 +100,11 @@ def _edge_shapes(seen: Seen, k: int) -> list[Shape]:
     for side in (0, 1):
         for role, where, edge in (
             ("edge", used, trace.edges[side]),
-            ("left_out", ~used & trace.way, np.where(np.isfinite(trace.edges[side]), trace.edges[side], trace.course[side])),
+            (
+                "left_out",
+                ~used & trace.way,
+                np.where(np.isfinite(trace.edges[side]), trace.edges[side], trace.course[side]),
+            ),
         ):
             if where.any():
                 points = seen.to_picture(rows, np.where(where, edge, np.nan))
@@ -119,7 +123,10 @@ def _event(defect: Defect, seen: Seen, figures: list[LineFigures], sight: Sight)
     line = figures[defect.line if single else inner[0]]
     along = sight.scale.y if seen.direction.vertical else sight.scale.x
     return Event(
-        item="..".join(items), event=defect.kind, x_px=float(x), y_px=float(y),
+        item="..".join(items),
+        event=defect.kind,
+        x_px=float(x),
+        y_px=float(y),
         size=defect.extent * along * math.hypot(1.0, line.straight.slope),
         area=defect.area * sight.scale.x * sight.scale.y,
     )

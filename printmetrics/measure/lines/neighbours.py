@@ -53,8 +53,13 @@ def neighbour_readings(
 
     def reading(quantity: str, value: float | None, **rest: float | Flag | None) -> Reading:
         return Reading(
-            item=item, quantity=quantity, value=value, unit=CATALOGUE["lines"][quantity].unit(unit),
-            eval_length=length, sampling=one.straight.step, **rest,  # type: ignore[arg-type]
+            item=item,
+            quantity=quantity,
+            value=value,
+            unit=CATALOGUE["lines"][quantity].unit(unit),
+            eval_length=length,
+            sampling=one.straight.step,
+            **rest,  # type: ignore[arg-type]
         )
 
     near, far = _on_common_axis(one.straight, two.straight)
@@ -88,8 +93,13 @@ def neighbour_readings(
     )
     readings.append(
         reading(
-            "space_mean", mean, u_noise=noise, u_sampling=sampling, u_common=common,
-            dof=math.inf if dof is None else dof, flags=flags,
+            "space_mean",
+            mean,
+            u_noise=noise,
+            u_sampling=sampling,
+            u_common=common,
+            dof=math.inf if dof is None else dof,
+            flags=flags,
         )
     )
     readings.append(_least(reading, one, two, options, u_point, mean, bridges, shape, flags))

@@ -19,7 +19,8 @@ class LinesOptions(FeatureOptions):
         "auto", description="Which way the lines run: found by itself, along an axis, or degrees from +x towards +y."
     )
     centres: tuple[FiniteFloat, ...] | None = Field(
-        None, min_length=1,
+        None,
+        min_length=1,
         description="Where the lines' centres are, in um across them, at the middle of the region; "
         "keeps L1, L2, L3 the same line.",
     )
@@ -28,14 +29,14 @@ class LinesOptions(FeatureOptions):
         0.5, description="Where between dark (0) and bright (1) the edge is taken."
     )
     neck_length: Positive | None = Field(
-        None, description="Local width is averaged over this length for width_min and width_max; "
-        "default: 4 blur sigmas."
+        None,
+        description="Local width is averaged over this length for width_min and width_max; default: 4 blur sigmas.",
     )
 
     @model_validator(mode="before")
     @classmethod
-    def _count_is_a_limit(cls, data: Any) -> Any:
-        """An expected number of lines limits their count, unless the recipe limits it otherwise."""
+    def _count_is_a_limit(cls, data: Any) -> Any:  # noqa: ANN401  (whatever the recipe holds)
+        """Let an expected number of lines limit their count, unless the recipe limits it otherwise."""
         if isinstance(data, dict):
             centres = data.get("centres")
             count = len(centres) if isinstance(centres, list | tuple) else data.get("count")
@@ -47,7 +48,7 @@ class LinesOptions(FeatureOptions):
     @field_validator("direction")
     @classmethod
     def _near_an_axis(cls, direction: str | float) -> str | float:
-        if not isinstance(direction, str) and MAX_TILT_DEG < abs((direction + 45) % 90 - 45):
+        if not isinstance(direction, str) and abs((direction + 45) % 90 - 45) > MAX_TILT_DEG:
             msg = f"direction is {direction:g} degrees; lines are measured within {MAX_TILT_DEG:g} degrees of an axis"
             raise ValueError(msg)
         return direction

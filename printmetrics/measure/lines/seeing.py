@@ -111,8 +111,17 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
     ink = _ink(image, traces, bright=options.ink == "bright")
     defects, hit = _defects(ink, course, traces)
     return Seen(
-        direction=direction, origin=origin, image=image, saturated=saturated, names=names, traces=traces,
-        defects=defects, hit=hit, ink=ink, count=len(traces), expected=expected,
+        direction=direction,
+        origin=origin,
+        image=image,
+        saturated=saturated,
+        names=names,
+        traces=traces,
+        defects=defects,
+        hit=hit,
+        ink=ink,
+        count=len(traces),
+        expected=expected,
     )
 
 
@@ -277,9 +286,7 @@ def _defects(
     return found, hit
 
 
-def _concerned(
-    defect: Defect, left: NDArray[np.float64], right: NDArray[np.float64], blur: float
-) -> list[int]:
+def _concerned(defect: Defect, left: NDArray[np.float64], right: NDArray[np.float64], blur: float) -> list[int]:
     """Lines whose edges a defect spoils: those it touches, and those within its blur."""
     if defect.kind in ("open", "neck", "void"):
         return [defect.line]
