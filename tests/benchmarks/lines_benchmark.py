@@ -295,14 +295,19 @@ def roughness_table(pool: ProcessPoolExecutor, *, quick: bool) -> None:
 # --- 4: coverage -----------------------------------------------------------------------------------------------------
 
 
+def correlation(lag: float, xi: float, hurst: float) -> float:
+    """Correlation of the Palasantzas process: (z / 2)^H 2 K_H(z) / Gamma(H), z = lag / xi."""
+    z = max(lag / xi, 1e-9)
+    return float(2 ** (1 - hurst) / gamma(hurst) * z**hurst * kv(hurst, z))
+
+
 def removed(length: float, xi: float, hurst: float) -> float:
     """Share of the variance that the mean over a length takes: 2 int (1 - u) rho(u L) du."""
 
-    def weighted(u: float) -> float:
-        z = max(u * length / xi, 1e-9)
-        return float((1 - u) * 2 ** (1 - hurst) / gamma(hurst) * z**hurst * kv(hurst, z))
-
-    return 2.0 * quad(weighted, 0.0, min(1.0, 40 * xi / length), limit=200)[0]
+    return (
+        2.0
+        * quad(lambda u: (1 - u) * correlation(u * length, xi, hurst), 0.0, min(1.0, 40 * xi / length), limit=200)[0]
+    )
 
 
 def coverage_scene(seed: int) -> dict[str, float]:
@@ -313,11 +318,16 @@ def coverage_scene(seed: int) -> dict[str, float]:
     lengths = float(rng.choice([20.0, 30.0, 60.0, 120.0]))
     while not 200 <= lengths * xi <= 2000:
         xi, lengths = float(rng.choice([6.0, 12.0, 25.0, 50.0])), float(rng.choice([20.0, 30.0, 60.0, 120.0]))
-    return {
+    factors = {
         "blur": blur, "CNR": float(rng.choice([5.0, 10.0, 50.0, 200.0])), "xi": xi, "L / xi": lengths,
         "H": float(rng.choice([0.3, 0.5, 0.75, 1.0])), "sd": float(rng.choice([0.2, 0.5, 1.0, 2.0])),
         "rho": float(rng.choice([-0.5, 0.0, 0.5, 0.9])), "width": float(rng.choice([25.0, 40.0, 60.0])),
     }  # fmt: skip
+    # How far an edge moves along a piece as long as the blur, over the blur: where it nears 1, blur is not linear.
+    s = effective(blur)
+    move = math.sqrt(2 * (1 - correlation(s, xi, factors["H"]))) * factors["sd"] / s
+    factors["move"] = next(top for top in (0.1, 0.2, 0.4, 0.7, 3.0) if move <= top)
+    return factors
 
 
 def coverage_task(seed: int) -> list[tuple[dict[str, float], str, float, float, bool, bool, str]]:
@@ -423,12 +433,12 @@ def coverage_table(pool: ProcessPoolExecutor, *, quick: bool) -> None:
     ):  # fmt: skip
         rated = [r for r in by_name[name] if not r[6].startswith(("withheld", "no u"))]
         cells = []
-        for factor in ("blur", "CNR", "xi", "L / xi", "H", "sd", "rho", "width"):
+        for factor in ("blur", "CNR", "xi", "L / xi", "H", "sd", "rho", "width", "move"):
             levels = sorted({r[0][factor] for r in rated})
             parts = ([r[at] for r in rated if r[0][factor] == level] for level in levels)
             cells.append(", ".join(f"{v:g}: {share(sum(p), len(p))}" for v, p in zip(levels, parts, strict=True)))
         rows.append((f"{name}, {'process' if at == 5 else 'piece'}", *cells))
-    table("The same by factor, %", ("interval", "blur", "CNR", "xi", "L / xi", "H", "sd", "rho", "width"), rows)
+    table("The same by factor, %", ("interval", "blur", "CNR", "xi", "L / xi", "H", "sd", "rho", "width", "move"), rows)
 
 
 # --- 5: other pictures -----------------------------------------------------------------------------------------------
