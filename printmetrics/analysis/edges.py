@@ -330,12 +330,14 @@ class _Fit:
         )
         change = [*(own[self.block] for own in d_levels.T.copy()), d_blur[group]]
         rms = 0.0
-        self.x = np.empty(self.x.shape)
+        before, self.x = self.x, np.empty(self.x.shape)
         for i in range(self.k):
             own = move[i] - sum(self.gain[i][a] * change[a] for a in range(self.k + 2))
             own = np.clip(own, -1.5 * blur, 1.5 * blur)
-            self.x[i] = nearest[i] / PHASES + own
-            each = np.add.reduceat(own * own * self.good, self.starts[:-1]) / np.maximum(self.sizes, 1)
+            own += nearest[i] / PHASES
+            off = own - before[i]
+            self.x[i] = own
+            each = np.add.reduceat(off * off * self.good, self.starts[:-1]) / np.maximum(self.sizes, 1)
             rms = max(rms, float((np.sqrt(each) / self.blur).max()))
         self.longest = rms
         self.shared = self.shared + d_levels
@@ -448,7 +450,7 @@ class _Joint(_Fit):
     term of the model is a short combination of these.
     """
 
-    scout_steps, full_steps, settled, settled_step = 8, 6, 0.0, 0.004
+    scout_steps, full_steps, settled, settled_step = 12, 8, 0.003, 0.003
 
     def _look(self, nearest: NDArray[np.int32]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         k, n = self.k, self.pixels.shape[1]
