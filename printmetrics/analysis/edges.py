@@ -23,6 +23,7 @@ MIN_BLUR_PX, MAX_BLUR_PX = 0.35, 40.0
 _REACH = 4.0  # window beyond the edge, in blurs
 _SCOUT_STRIDE, _SCOUT_ROWS = 8, 256  # levels and blur are settled on so many of the rows first
 _MEDIAN_ROWS = 400  # enough for a typical value
+_LONGEST_STEP = 0.5  # of the levels, over the step between them
 _RUN = 2048  # rows whose tables stay in the processor's cache
 _FEWEST_ROWS = 8  # a block with fewer good rows has no levels of its own
 _MISFIT_SIGMAS = 6.0  # a row is a defect's when its residual stands out of the noise by this much,
@@ -323,6 +324,9 @@ class _Fit:
         big, pull = self._normal()
         self.shared_fit = _SharedFit(big, np.add.reduceat(self.weight, self.bounds), self.block_group, self.free)
         d_levels, d_blur = self.shared_fit.solve(pull)
+        # Far from the solution the linear step is too long.
+        most = _LONGEST_STEP * self.span[self.block_group][:, None]
+        d_levels = np.clip(d_levels, -most, most)
         d_blur = np.clip(
             d_blur,
             np.maximum(-0.4 * self.blur, MIN_BLUR_PX - self.blur),

@@ -141,11 +141,12 @@ class _Tracer:
         self.blur = self._first_blur()
 
     def _spaces(self) -> NDArray[np.float64]:
-        """Space left and right of each line."""
-        gaps = np.full((len(self.course), 2), float(self.width))
-        between = self.course[1:, 0, :: _sparse(self.height)] - self.course[:-1, 1, :: _sparse(self.height)]
-        gaps[:-1, 1] = gaps[1:, 0] = np.maximum(np.median(between, axis=1), 1.0)
-        return gaps
+        """Space left and right of each line, to the next line or the border."""
+        some = self.course[:, :, :: _sparse(self.height)]
+        before = np.concatenate([np.full((1, some.shape[2]), -0.5), some[:-1, 1]])
+        after = np.concatenate([some[1:, 0], np.full((1, some.shape[2]), self.width - 0.5)])
+        gaps = np.stack([some[:, 0] - before, after - some[:, 1]], axis=1)
+        return np.maximum(np.median(gaps, axis=2), 1.0)
 
     def _first_levels(self) -> NDArray[np.float64]:
         """Bare, ink, bare levels of each line as first guessed."""
@@ -183,9 +184,10 @@ class _Tracer:
                 levels = np.array([self.levels[k, side : side + 2] for k, side in group])
                 crossing = first_crossing(pixels, np.repeat(levels, size, axis=0))
                 for edge, r, f, x in zip(group, rows, first, np.split(crossing, np.cumsum(size)[:-1]), strict=True):
-                    found[edge] = r, f + x
+                    if edge not in found or len(r) > len(found[edge][0]) / 2:
+                        found[edge] = r, f + x
                     # A very rough edge strays to the ends of where it was looked for.
-                    at_end = float(np.mean((x < 1) | (x > n - 3))) if len(x) else 0.0
+                    at_end = float(np.mean((x < 1) | (x > n - 2))) if len(x) else 0.0
                     room = max(self.line_width[edge[0]], float(self.space[edge])) / 2
                     if at_end > _AT_END and todo[edge] < min(_SEARCH_MOST, room):
                         again[edge] = 2 * todo[edge]
