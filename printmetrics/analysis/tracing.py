@@ -23,7 +23,7 @@ _SEARCH_PX, _SEARCH_MOST = 6, 100  # a rough edge is looked for this far, plus 3
 _AT_END = 0.003  # and further where more than this part of it is found at the ends
 _SMOOTH_EDGE = 0.35  # an edge that strays less from its coarse course, in blurs, is not looked for row by row
 _KNOWN_BLUR = 5.0  # narrower than this many blurs, a line takes its blur from wider ones where there are any
-_PASSES = 5  # fits of one line, at most
+_PASSES = 8  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
 _SHAPE_ROWS = 128  # the edge's shape and other typical values are judged on so many rows
 _BESIDE, _CORE = (1.3, 2.6), 0.6  # blurs from the edge's middle: where sharpening overshoots, and its core
@@ -272,7 +272,7 @@ class _Tracer:
                     self.blurs[k] = np.nan
                     due.discard(k)
                     continue
-                settled = turn > 0 or not self.space[k].min() < 2 * window_half(self.blur)
+                settled = turn >= self._turns(k)
                 for cut in cuts[k]:
                     settled &= self._keep(cut)
                 if settled:
@@ -280,6 +280,11 @@ class _Tracer:
             if not due:
                 break
         return [self._trace(k, cuts[k]) for k in lines]
+
+    def _turns(self, k: int) -> int:
+        """Fits a line takes until its neighbours' light is settled: most where a neighbour just misses the window."""
+        half, space = window_half(self.blur), self.space[k].min()
+        return 0 if space > 2 * half else 1 if space < half else 5
 
     def _keep(self, cut: _Cut) -> bool:
         """Take over what a fit says of its own edges; tell whether its window suited its blur."""
