@@ -14,6 +14,7 @@ if TYPE_CHECKING:
 
 MAX_TILT_DEG = 30.0
 _BAND_ROWS, _BANDS, _BAND_PIXELS = 8, (3, 32), 150_000  # the direction is taken from this much of a large picture
+_SHRINKS = (1, 4)  # edges so rough that they have no direction up close have one from afar
 _SPREAD_DEG = 8  # a line that wanders shows its course in a range of angles
 _BLOCKS = 48  # so many blocks along the lines, where there are rows enough
 _BLOCK_ROWS = 2, 64
@@ -22,6 +23,7 @@ SMOOTH_PX = (1.0, 3.0)  # the second is tried where the first finds nothing: str
 _NOISE_PIXELS = 20_000
 _NOISE_SIGMAS = 6.0  # a step counts when it stands out of the noise by this much
 _RELATIVE_STEP = 0.12  # and is at least this part of the picture's strong steps
+_APART_BLOCKS, _SLOPE_BINS, _LIKELY = 4, 61, 0.7  # the lines' slope is checked on pieces this far apart
 _FOLLOW = 0.3  # how fast a chain follows a line that wanders
 _COVERED = 0.4  # a line shows its edges over at least this part of its way through the region
 
@@ -83,15 +85,15 @@ def find_direction(image: NDArray[Any], *, vertical: bool | None = None, smooth:
     -----
     Histogram of gradient angles, weighted with the squared gradient above its noise, in bands of rows and of columns.
     """
+    spread = range(-_SPREAD_DEG // 2, _SPREAD_DEG // 2 + 1)
     votes = np.zeros(180)
-    for axis in (0, 1):
-        size = image.shape[axis]
-        band = min(round(_BAND_ROWS * smooth), size)
-        count = min(max(_BAND_PIXELS // (band * image.shape[1 - axis]), _BANDS[0]), _BANDS[1])
-        for start in np.unique(np.linspace(0, size - band, count).astype(int)):
-            part = image[start : start + band] if axis == 0 else image[:, start : start + band]
-            votes += _angle_votes(np.ascontiguousarray(part, dtype=np.float32), smooth)
-    votes = np.asarray(sum(np.roll(votes, k) for k in range(-_SPREAD_DEG // 2, _SPREAD_DEG // 2 + 1)))
+    clearest = 0.0
+    for shrink in _SHRINKS:
+        raw = _votes(image, smooth, shrink)
+        wide = np.asarray(sum(np.roll(raw, k) for k in spread))
+        clear = float(wide.max()) / max(float(raw.sum()), 1e-30)
+        if clear > clearest:
+            votes, clearest = wide, clear
     reach = round(MAX_TILT_DEG) + 2
     near = np.arange(-reach, reach + 1)
     strength = {True: votes[near % 180], False: votes[(near + 90) % 180]}
@@ -105,6 +107,24 @@ def find_direction(image: NDArray[Any], *, vertical: bool | None = None, smooth:
     # A gradient at `angle` from +x belongs to a line at `angle` from +y: x falls as y grows.
     slope = -math.tan(math.radians(angle)) if upright else math.tan(math.radians(angle))
     return Direction(upright, slope, best[not upright] / max(best[upright], 1e-30))
+
+
+def _votes(image: NDArray[Any], smooth: float, shrink: int) -> NDArray[np.float64]:
+    """Votes for each gradient angle, from bands of rows and of columns."""
+    votes = np.zeros(180)
+    for axis in (0, 1):
+        size = image.shape[axis]
+        band = min(round(_BAND_ROWS * smooth) * shrink, size)
+        count = min(max(_BAND_PIXELS // (band * image.shape[1 - axis]), _BANDS[0]), _BANDS[1])
+        for start in np.unique(np.linspace(0, size - band, count).astype(int)):
+            part = np.asarray(image[start : start + band] if axis == 0 else image[:, start : start + band])
+            small = (part.shape[1] // shrink, part.shape[0] // shrink)
+            if min(small) < _BAND_ROWS // 2:
+                continue
+            if shrink > 1:
+                part = cv2.resize(part, small, interpolation=cv2.INTER_AREA)
+            votes += _angle_votes(np.ascontiguousarray(part, dtype=np.float32), smooth)
+    return votes
 
 
 def _angle_votes(part: NDArray[np.float32], smooth: float) -> NDArray[np.float64]:
@@ -182,11 +202,38 @@ def find_lines(image: NDArray[Any], slope: float, *, bright: bool, smooth: float
     if not len(centre):
         return []
     pieces = _pieces(profiles, smooth, bright=bright)
+    better = _common_slope(pieces, rows, slope)
+    if abs(better - slope) * rows > 1.0:  # askew enough to smear a block by a pixel
+        slope = better
+        profiles, centre = block_profiles(image, slope, rows)
+        pieces = _pieces(profiles, smooth, bright=bright)
     chains = _chains(pieces, centre, slope)
     lines = _join(chains, slope)
     kept = [line for line in lines if _covered(line, image.shape[1], centre) >= _COVERED]
     middle = image.shape[0] / 2
     return sorted(kept, key=lambda c: float(np.median((c.left + c.right) / 2 - slope * (c.rows - middle))))
+
+
+def _common_slope(pieces: list[NDArray[np.float64]], rows: int, slope: float) -> float:
+    """Return the slope on which most pieces of blocks some way apart lie; of several, the one nearest to `slope`."""
+    apart = min(_APART_BLOCKS, len(pieces) - 1)
+    middles = [piece.mean(axis=1) for piece in pieces]
+    if apart < 1:
+        return slope
+    steps = [(b[None, :] - a[:, None]).ravel() for a, b in zip(middles, middles[apart:], strict=False)]
+    slopes = np.concatenate(steps) / (apart * rows)
+    steepest = math.tan(math.radians(MAX_TILT_DEG + 1))
+    slopes = slopes[np.abs(slopes) <= steepest]
+    if len(slopes) < len(steps) / 2:
+        return slope
+    votes = np.histogram(slopes, bins=_SLOPE_BINS, range=(-steepest, steepest))[0]
+    votes = np.convolve(votes, np.ones(3), mode="same")
+    width = 2 * steepest / _SLOPE_BINS
+    place = (np.arange(_SLOPE_BINS) + 0.5) * width - steepest
+    likely = np.nonzero(votes >= _LIKELY * votes.max())[0]
+    best = place[likely[np.argmin(np.abs(place[likely] - slope))]]
+    near = slopes[np.abs(slopes - best) <= 1.5 * width]
+    return float(np.median(near))
 
 
 def _pieces(profiles: NDArray[np.float32], scale: float, *, bright: bool) -> list[NDArray[np.float64]]:
