@@ -114,6 +114,15 @@ def test_a_line_takes_away_what_the_slope_has_more_than_the_mean(ratio: float) -
     assert both - removed_share(ratio, 1.0, 0.5) == pytest.approx(slope, rel=1e-9)
 
 
+@pytest.mark.parametrize("line", [False, True])
+@pytest.mark.parametrize("hurst", HURSTS)
+def test_closed_form_for_long_records_takes_over_where_the_integral_leaves_off(hurst: float, line: bool) -> None:
+    # 40 xi is where one ends and the other begins: a jump would be seen beside the slope 1e-7.
+    below, above = (removed_share(40.0 * (1.0 + d), 1.0, hurst, line=line) for d in (-1e-7, 1e-7))
+    assert above == pytest.approx(below, rel=4e-7)
+    assert above < below
+
+
 @pytest.mark.parametrize("hurst", HURSTS)
 def test_variance_of_the_mean_nears_the_spectrum_at_zero_over_the_length(hurst: float) -> None:
     # First terms for a long record, derived: S(0)/L - 4 H (xi/L)^2.

@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 from scipy.special import ndtri
 
-from printmetrics.analysis.roughness import Process, amplitude_filter, fit_spectrum, u_mean, unbiased_sd
+from printmetrics.analysis.roughness import Process, Record, amplitude_filter, fit_spectra, u_mean, unbiased_sd
 from printmetrics.errors import FeatureError
 from printmetrics.flags import Flag
 from printmetrics.measure.lines.geometry import Straightened, slope_of, straighten
@@ -40,6 +40,7 @@ _MATTERS = 0.04
 _GAPS = 0.2
 _STANDS_OUT = 5.0
 _SQRT3 = math.sqrt(3.0)
+_SERIES = ("width", "left", "right")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -64,13 +65,13 @@ class LineFigures:
         How far either edge's middle lies off the model's.
     level_shift : float
         By how much the width at the recipe's edge level exceeds that at mid-level.
+    flags : Flag
+        What is doubtful about the line as a whole.
     width, left, right : Process or None
         Fitted processes; None where the line is too short or perfectly straight.
     mean_u : dict of str to (float, float)
         Standard uncertainty of the mean of ``width``, ``left`` and ``right`` as that of the process, and its degrees
         of freedom; empty where a fit is missing.
-    flags : Flag
-        What is doubtful about the line as a whole.
     """
 
     name: str
@@ -82,11 +83,11 @@ class LineFigures:
     u_blur: NDArray[np.float64]
     shape_shift: NDArray[np.float64]
     level_shift: float
-    width: Process | None
-    left: Process | None
-    right: Process | None
-    mean_u: dict[str, tuple[float, float]]
     flags: Flag
+    width: Process | None = None
+    left: Process | None = None
+    right: Process | None = None
+    mean_u: dict[str, tuple[float, float]] = field(default_factory=dict)
 
     @property
     def length(self) -> float:
@@ -135,15 +136,13 @@ def level_shift(blur: NDArray[np.float64], level: float, *, bright: bool) -> flo
     return -shift if bright else shift
 
 
-def line_figures(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFigures:
-    """Bring one traced line into lengths, and fit its roughness.
+def line_figures(seen: Seen, sight: Sight, options: LinesOptions) -> list[LineFigures]:
+    """Bring all traced lines into lengths, and fit their roughness.
 
     Parameters
     ----------
     seen : Seen
         All lines.
-    k : int
-        Index of the line.
     sight : Sight
         For the scale and the optics.
     options : LinesOptions
@@ -151,35 +150,46 @@ def line_figures(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> Lin
 
     Returns
     -------
-    LineFigures
-        Figures of the line.
+    list of LineFigures
+        Figures of each line.
     """
+    lines = [_geometry(seen, k, sight, options) for k in range(len(seen.traces))]
+    along, across = (sight.scale.y, sight.scale.x) if seen.direction.vertical else (sight.scale.x, sight.scale.y)
+    records = {}
+    for k, line in enumerate(lines):
+        # The same optics blur the edge along the line.
+        around = float(line.blur.mean()) * along / across
+        for name in _SERIES:
+            record = _record(line, name, around)
+            if record is not None:
+                records[k, name] = record
+    fits = dict(zip(records, fit_spectra(list(records.values())), strict=True))
+    return [_with_fits(line, *(fits.get((k, name)) for name in _SERIES)) for k, line in enumerate(lines)]
+
+
+def _with_fits(line: LineFigures, width: Process | None, left: Process | None, right: Process | None) -> LineFigures:
+    fits = zip(_SERIES, (width, left, right), strict=True)
+    mean_u = {name: u_mean(fit, line.length) for name, fit in fits if fit is not None}
+    return replace(line, width=width, left=left, right=right, mean_u=mean_u if len(mean_u) == len(_SERIES) else {})
+
+
+def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFigures:
+    """Bring one traced line into lengths; its roughness is yet to be fitted."""
     trace, scale = seen.traces[k], sight.scale
     along, across = (scale.y, scale.x) if seen.direction.vertical else (scale.x, scale.y)
     rows = np.arange(trace.edges.shape[1], dtype=np.float64) + seen.origin[1 if seen.direction.vertical else 0]
     start = seen.origin[0 if seen.direction.vertical else 1]
     points = np.stack([np.column_stack([rows * along, (edge + start) * across]) for edge in trace.edges])
     points[:, ~np.isfinite(trace.edges).all(axis=0)] = np.nan
-    clean = points.copy()
-    if np.isfinite(points[:, ~seen.hit[k], 1]).sum() > np.isfinite(points[..., 1]).sum() / 4:
-        clean[:, seen.hit[k]] = np.nan
+    clean, hit = points, seen.hit[k]
+    if hit.any() and np.isfinite(points[:, ~hit, 1]).sum() > np.isfinite(points[..., 1]).sum() / 4:
+        clean = points.copy()
+        clean[:, hit] = np.nan
     slope = slope_of(clean)
     straight = straighten(clean, slope, along)
     normal = across / math.hypot(1.0, slope)  # length across the line per pixel along the row
     blur = trace.blur * normal
     u_point = trace.u_row * normal
-    around = float(blur.mean()) * along / across  # the same optics blur the edge along the line
-    series = {
-        "width": (straight.width, 2, straight.width_transfer, False),
-        "left": (straight.left, 1, straight.transfer[0], True),
-        "right": (straight.right, 1, straight.transfer[1], True),
-    }
-    fits: dict[str, Process | None] = {}
-    for name, (values, points_each, transfer, line_removed) in series.items():
-        noise = float(np.sqrt((u_point**2).mean())) if name == "width" else float(u_point[int(name == "right")])
-        fits[name] = _fit(values, straight.step, around, noise, points_each, transfer, line_removed=line_removed)
-    length = float(np.isfinite(straight.width).sum()) * straight.step
-    mean_u = {name: u_mean(fit, length) for name, fit in fits.items() if fit is not None}
     return LineFigures(
         name=seen.names[k],
         straight=straight,
@@ -190,32 +200,32 @@ def line_figures(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> Lin
         u_blur=trace.u_blur * normal,
         shape_shift=trace.shape_shift * normal,
         level_shift=level_shift(blur, options.edge_level, bright=options.ink == "bright"),
-        mean_u=mean_u if len(mean_u) == len(fits) else {},
         flags=_flags(seen, k, sight, blur, options),
-        **fits,
     )
 
 
-def _fit(
-    values: NDArray[np.float64], step: float, blur: float, noise: float, points: int, transfer: NDArray[np.float64],
-    *, line_removed: bool,
-) -> Process | None:
-    """Fit the process of one series; None where it is too short or has no scatter at all."""
+def _record(line: LineFigures, name: str, blur: float) -> Record | None:
+    """Return the width or an edge as it is fitted; None where it is too short."""
+    straight, side = line.straight, ("left", "right").index(name) if name != "width" else None
+    values: NDArray[np.float64] = getattr(straight, name)
     known = np.isfinite(values)
     if not known.any():
         return None
     first, last = np.nonzero(known)[0][[0, -1]]
     part = values[first : last + 1]
-    if line_removed:
+    if side is not None:
         place = np.arange(len(part), dtype=np.float64)
         good = np.isfinite(part)
         middle = place[good].mean()
         slope = (place[good] - middle) @ part[good] / max(float(((place[good] - middle) ** 2).sum()), 1e-30)
         part = part - part[good].mean() - slope * (place - middle)
+    noise = float(np.sqrt((line.u_point**2).mean())) if side is None else float(line.u_point[side])
     try:
-        return fit_spectrum(
-            part, step, blur=blur, noise_expected=max(noise, 1e-12), noise_multiplicity=points,
-            noise_transfer=transfer, line_removed=line_removed,
+        return Record(
+            data=part, step=straight.step, blur=blur, noise_expected=max(noise, 1e-12),
+            noise_multiplicity=2 if side is None else 1,
+            noise_transfer=straight.width_transfer if side is None else straight.transfer[side],
+            line_removed=side is not None,
         )
     except FeatureError:
         return None
@@ -383,8 +393,9 @@ class _LineReadings:
         base = self.width + line.level_shift
         shape = abs(float(line.shape_shift[1] - line.shape_shift[0])) / _SQRT3
         if line.width is not None:
-            averaged, u_local = amplitude_filter(base, line.width, average_over=neck, noise_transfer=line.straight.width_transfer)
-            true, _ = amplitude_filter(base, line.width, noise_transfer=line.straight.width_transfer)
+            (averaged, true), (u_local, _) = amplitude_filter(
+                base, line.width, average_over=[neck, 0.0], noise_transfer=line.straight.width_transfer
+            )
             u_raw = math.sqrt(2.0) * line.width.noise / math.sqrt(count)
         else:
             averaged, true, u_local, u_raw = raw, base, 0.0, 0.0
@@ -394,7 +405,7 @@ class _LineReadings:
             stands_out = sign * (seen - value) > _STANDS_OUT * u_raw
             self.add(
                 name, 0.0 if name == "width_min" and self.opens else seen if stands_out else value,
-                noise=u_raw if stands_out else u_local, model=shape, flags=flags,
+                noise=u_raw if stands_out else float(u_local), model=shape, flags=flags,
             )
         hit = np.isfinite(line.whole.width) & ~_covered(line.whole.s, line.straight)
         local = np.concatenate([true[np.isfinite(true)], whole[hit]])

@@ -73,7 +73,7 @@ def measure_lines(sight: Sight, options: LinesOptions) -> Measured:
     """
     seen = see_lines(sight, options)
     result = Measured()
-    figures = [line_figures(seen, k, sight, options) for k in range(len(seen.traces))]
+    figures = line_figures(seen, sight, options)
     for k, line in enumerate(figures):
         result.readings.extend(line_readings(line, seen, sight, options))
         result.shapes.extend(_edge_shapes(seen, k))
