@@ -295,7 +295,7 @@ def _distance(expected: NDArray[np.float64], seen: NDArray[np.float64], slack: f
     """Return how far each piece is from each line expected; infinite where it can't be that line."""
     width = expected[:, 1] - expected[:, 0]
     worst = np.abs(seen - expected[:, None]).max(axis=2)
-    return np.where(worst <= np.minimum(slack + 0.15 * width, 0.5 * width + 1.5)[:, None], worst, np.inf)
+    return np.where(worst <= np.minimum(slack + 0.3 * width, 0.5 * width + 1.5)[:, None], worst, np.inf)
 
 
 def _match(expected: NDArray[np.float64], seen: NDArray[np.float64]) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
