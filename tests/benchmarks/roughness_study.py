@@ -16,7 +16,7 @@ from scipy import fft
 from scipy.stats import t as student
 
 from printmetrics.analysis.process import bin_kernel, palasantzas_psd
-from printmetrics.analysis.roughness import amplitude_filter, fit_spectrum, u_mean, unbiased_sd
+from printmetrics.analysis.roughness import Record, amplitude_filter, fit_spectra, u_mean, unbiased_sd
 
 if TYPE_CHECKING:
     from collections.abc import Iterable
@@ -24,7 +24,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 
-def simulate(  # noqa: PLR0913  (a record and a process)
+def simulate(
     rng: np.random.Generator,
     runs: int,
     n: int,
@@ -64,8 +64,8 @@ def coverage(runs: int, title: str, cases: Iterable[tuple[float, tuple[int, floa
         _, seen = simulate(rng, runs, n, xi, hurst, blur=blur * xi)
         seen = seen + noise * rng.standard_normal(seen.shape)
         found = []
-        for row in seen:
-            process = fit_spectrum(row, 1.0, blur=blur * xi, noise_expected=noise)
+        records = [Record(data=row, step=1.0, blur=blur * xi, noise_expected=noise) for row in seen]
+        for row, process in zip(seen, fit_spectra(records), strict=True):
             u, dof = u_mean(process, n)
             u = np.hypot(u, process.noise / np.sqrt(n))
             found.append((abs(row.mean()) < student.ppf(0.975, dof) * u, dof, u))
@@ -111,7 +111,8 @@ def bias(runs: int, *, line: bool = False, missing: float = 0.0, n: int = 2000) 
                 row[start : start + rng.integers(5, 30)] = np.nan
             sharp = straightened(full) if line else full
             given = straightened(row) if line else row
-            process = fit_spectrum(given, 1.0, blur=blur, noise_expected=noise, line_removed=line)
+            record = Record(data=given, step=1.0, blur=blur, noise_expected=noise, line_removed=line)
+            process = fit_spectra([record])[0]
             rough = unbiased_sd(given, process)
             filtered, u = amplitude_filter(given, process, average_over=reach)
             local = np.convolve(sharp, window, "same")[inner]
@@ -141,8 +142,9 @@ def straight(runs: int, n: int = 3000) -> None:
     """Print what is left of a straight line with edge noise 1."""
     rng = np.random.default_rng(8)
     found = []
-    for row in rng.standard_normal((runs, n)):
-        process = fit_spectrum(row, 1.0, blur=2.0, noise_expected=1.0)
+    rows = rng.standard_normal((runs, n))
+    fits = fit_spectra([Record(data=row, step=1.0, blur=2.0, noise_expected=1.0) for row in rows])
+    for row, process in zip(rows, fits, strict=True):
         filtered, _ = amplitude_filter(row, process, average_over=5.0)
         found.append(
             (process.sigma, process.resolved, unbiased_sd(row, process).sd, filtered.std(), u_mean(process, n)[0])
@@ -161,9 +163,10 @@ def speed(runs: int, n: int = 3000) -> None:
     for xi, noise in ((30.0, 0.1), (30.0, 1.0), (3.0, 0.3), (150.0, 0.3)):
         _, seen = simulate(rng, runs, n, xi, 0.5, blur=2.0)
         seen = seen + noise * rng.standard_normal(seen.shape)
-        fit_spectrum(seen[0], 1.0, blur=2.0, noise_expected=noise)
+        records = [Record(data=row, step=1.0, blur=2.0, noise_expected=noise) for row in seen]
+        fit_spectra(records[:1])
         begin = time.perf_counter()
-        processes = [fit_spectrum(row, 1.0, blur=2.0, noise_expected=noise) for row in seen]
+        processes = fit_spectra(records)
         fitted = time.perf_counter()
         for row, process in zip(seen, processes, strict=True):
             unbiased_sd(row, process)
