@@ -14,7 +14,9 @@ if TYPE_CHECKING:
 
 MAX_TILT_DEG = 30.0
 _BAND_ROWS, _BANDS, _BAND_PIXELS = 8, (3, 32), 150_000  # the direction is taken from this much of a large picture
+_CLEAR = 0.6  # of all votes for one direction settles it
 _SHRINKS = (1, 4)  # edges so rough that they have no direction up close have one from afar
+_TYPICAL = 4000  # pixels that tell the typical gradient of a band
 _SPREAD_DEG = 8  # a line that wanders shows its course in a range of angles
 _BLOCKS = 48  # so many blocks along the lines, where there are rows enough
 _BLOCK_ROWS = 2, 64
@@ -94,6 +96,8 @@ def find_direction(image: NDArray[Any], *, vertical: bool | None = None, smooth:
         clear = float(wide.max()) / max(float(raw.sum()), 1e-30)
         if clear > clearest:
             votes, clearest = wide, clear
+        if clear > _CLEAR:
+            break
     reach = round(MAX_TILT_DEG) + 2
     near = np.arange(-reach, reach + 1)
     strength = {True: votes[near % 180], False: votes[(near + 90) % 180]}
@@ -132,9 +136,12 @@ def _angle_votes(part: NDArray[np.float32], smooth: float) -> NDArray[np.float64
     gx = cv2.Sobel(part, cv2.CV_32F, 1, 0)
     gy = cv2.Sobel(part, cv2.CV_32F, 0, 1)
     power = gx * gx + gy * gy
-    noise = float(np.median(power))
+    noise = float(np.median(power.ravel()[:: max(1, power.size // _TYPICAL)]))
     strong = power > 6 * noise
-    angle = np.degrees(np.arctan2(gy[strong], gx[strong])) % 180
+    gx, gy = gx[strong], gy[strong]
+    if not gx.size:
+        return np.zeros(180)
+    angle = cv2.phase(gx, gy, angleInDegrees=True).ravel()
     return np.asarray(np.bincount(np.rint(angle).astype(int) % 180, weights=power[strong], minlength=180), np.float64)
 
 

@@ -3,13 +3,21 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from scipy.special import ndtr
 
-from printmetrics.analysis.edges import EdgeFit, Windows, first_crossing, fit_edges, gather, window_half
+from printmetrics.analysis.edges import (
+    EdgeFit,
+    Windows,
+    first_crossing,
+    fit_edges,
+    gather,
+    position_bound,
+    window_half,
+)
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -26,8 +34,31 @@ _KNOWN_BLUR = 5.0  # narrower than this many blurs, a line takes its blur from w
 _PASSES = 8  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
 _SHAPE_ROWS = 128  # the edge's shape and other typical values are judged on so many rows
+_SURE, _STEADY = 4.0, 4.0  # standard errors by which the edge's shape must stand out of the noise
 _BESIDE, _CORE = (1.3, 2.6), 0.6  # blurs from the edge's middle: where sharpening overshoots, and its core
 _FEWEST_ROWS = 16
+
+
+@dataclass(frozen=True, slots=True)
+class EdgeShape:
+    """How the mean edge seen differs from the model; 0 where it stands not out of the noise.
+
+    Parameters
+    ----------
+    overshoot : float
+        How far the levels beside the edge go beyond the plateaus, over the step; sharpening makes it positive.
+    shift : float
+        How far the middle of the edge seen lies from that of the edge fitted. [px]
+    skew : float
+        Mean residual of the core minus that of the flanks, over the step; a camera's gamma left in makes one.
+    steady : float
+        How far a pattern fixed to the picture's columns may shift the edge. [px]
+    """
+
+    overshoot: float = 0.0
+    shift: float = 0.0
+    skew: float = 0.0
+    steady: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -56,10 +87,8 @@ class Trace:
         Middle between ink and bare in blocks along the line. [counts]
     noise : float
         sd of a pixel. [counts]
-    overshoot : float
-        How far the levels beside the edge go beyond the plateaus, over the step; sharpening makes it positive.
-    shape_shift : ndarray of float, shape (2,)
-        How far the middle of the edge seen lies from that of the edge fitted. [px]
+    shapes : list of EdgeShape
+        How either mean edge differs from the model.
     """
 
     way: NDArray[np.bool_]
@@ -74,8 +103,7 @@ class Trace:
     bare_range: float
     middle_level: NDArray[np.float64]
     noise: float
-    overshoot: float
-    shape_shift: NDArray[np.float64]
+    shapes: list[EdgeShape]
 
     @property
     def width(self) -> float:
@@ -100,7 +128,7 @@ class _Cut:
     blur: float
     known: bool
     fit: EdgeFit | None = None
-    shape: tuple[float, list[float]] = (0.0, [0.0, 0.0])
+    shape: list[EdgeShape] = field(default_factory=list)
 
 
 def trace_lines(image: NDArray[Any], lines: Sequence[CoarseLine]) -> list[Trace | None]:
@@ -376,8 +404,9 @@ class _Tracer:
         edges = self.edges[k]
         if any(c.fit is None for c in cuts) or np.isfinite(edges[0] + edges[1]).sum() < _FEWEST_ROWS:
             return None
-        covariance, u_row, u_blur, shift = np.zeros((2, 2)), np.zeros(2), np.zeros(2), np.zeros(2)
-        over, bare, ink, noise = [], [], [], []
+        covariance, u_row, u_blur = np.zeros((2, 2)), np.zeros(2), np.zeros(2)
+        shapes = [EdgeShape(), EdgeShape()]
+        bare, ink, noise = [], [], []
         for cut in cuts:
             fit = cut.fit
             assert fit is not None  # noqa: S101  (looked at above)
@@ -386,8 +415,8 @@ class _Tracer:
             covariance[np.ix_(sides, sides)] = fit.mean_covariance[np.ix_(at, at)]
             u_row[sides] = fit.u_row[at]
             u_blur[sides] = fit.u_blur
-            beyond, shift[sides] = cut.shape
-            over.append(beyond)
+            for side, shape in zip(sides, cut.shape, strict=True):
+                shapes[side] = shape
             noise.append(fit.noise)
             for j, side in zip(at, sides, strict=True):
                 bare.append(fit.levels[:, j + side])
@@ -406,34 +435,45 @@ class _Tracer:
             bare_range=float(np.ptp(np.concatenate(bare))),
             middle_level=(ink[0] + bare[0]) / 2,
             noise=float(np.mean(noise)),
-            overshoot=float(np.mean(over)),
-            shape_shift=shift,
+            shapes=shapes,
         )
 
     @staticmethod
-    def _shape(pixels: NDArray[np.float32], fit: EdgeFit, own: list[int]) -> tuple[float, list[float]]:
-        """Compare the mean edge seen with the one fitted: overshoot beside it, shift of its middle."""
+    def _shape(pixels: NDArray[np.float32], fit: EdgeFit, own: list[int]) -> list[EdgeShape]:
+        """Compare the mean edge seen with the one fitted."""
         rows = np.arange(0, pixels.shape[0], max(1, pixels.shape[0] // _SHAPE_ROWS))
         rows = rows[np.isfinite(fit.position[:, rows].sum(axis=0))]
         if len(rows) < _FEWEST_ROWS:
-            return 0.0, [0.0 for _ in own]
+            return [EdgeShape() for _ in own]
         levels = np.median(fit.levels, axis=0)
         columns = np.arange(pixels.shape[1])
         u = [(columns - position[rows, None]) / fit.blur for position in fit.position]
         model = levels[0] + sum((levels[j + 1] - levels[j]) * ndtr(u[j]) for j in range(len(u)))
         residual = pixels[rows] - model
-        over, shift = [], []
+        # A pattern that stays at its columns, row after row, moves every row's edge alike.
+        chance = fit.noise**2 / len(rows)
+        steady = float(np.mean(residual.mean(axis=0) ** 2)) - chance
+        steady = math.sqrt(steady) if steady > _STEADY * chance * math.sqrt(2 / len(columns)) else 0.0
+        shapes = []
         for j in own:
             step = levels[j + 1] - levels[j]
-            beside = (np.abs(u[j]) > _BESIDE[0]) & (np.abs(u[j]) < _BESIDE[1])
-            over.append(float(np.mean((residual * np.sign(u[j]))[beside])) / step if beside.any() else 0.0)
-            core = np.abs(u[j]) < _CORE
-            slope = step / (math.sqrt(2 * math.pi) * fit.blur)
-            off = -float(np.mean(residual[core])) / slope if core.any() else 0.0
-            # Only what stands out of the noise is the edge's own.
-            chance = 2 * fit.noise / math.sqrt(max(int(core.sum()), 1)) / abs(slope)
-            shift.append(math.copysign(math.sqrt(max(off * off - chance * chance, 0.0)), off))
-        return float(np.mean(over)), shift
+            away = np.abs(u[j])
+            core, beside = away < _CORE, (away > _BESIDE[0]) & (away < _BESIDE[1])
+            if not core.any() or not beside.any():
+                shapes.append(EdgeShape())
+                continue
+            flank = (away > _CORE) & (away < _BESIDE[1])
+            noise = fit.noise / abs(step)
+            overshoot = float((residual * np.sign(u[j]))[beside].mean()) / step
+            overshoot = overshoot if abs(overshoot) > _SURE * noise / math.sqrt(beside.sum()) else 0.0
+            middle = float(residual[core].mean()) / step
+            skew = middle - float(residual[flank].mean()) / step
+            sure = len(u) == 1 and abs(skew) > _SURE * noise * math.sqrt(1 / core.sum() + 1 / flank.sum())
+            shift = -middle * math.sqrt(2 * math.pi) * fit.blur
+            shift = shift if abs(middle) > _SURE / 2 * noise / math.sqrt(core.sum()) else 0.0
+            steady_shift = position_bound(fit.blur, abs(step), steady)
+            shapes.append(EdgeShape(overshoot, shift, skew if sure else 0.0, steady_shift))
+        return shapes
 
 
 def _sparse(rows: int) -> int:

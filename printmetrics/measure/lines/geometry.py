@@ -66,10 +66,10 @@ def slope_of(points: NDArray[np.float64]) -> float:
     float
         Least-squares slope of the middle between the edges.
     """
-    middle = points.mean(axis=0)
-    middle = middle[np.isfinite(middle).all(axis=1)]
+    middle = (points[0] + points[1]) / 2
+    middle = middle[np.isfinite(middle[:, 1])]
     along = middle[:, 0] - middle[:, 0].mean()
-    return float(along @ middle[:, 1] / max(along @ along, 1e-30))
+    return float(along @ middle[:, 1] / max(float(along @ along), 1e-30))
 
 
 def straighten(points: NDArray[np.float64], slope: float, pitch: float) -> Straightened:
@@ -90,34 +90,34 @@ def straighten(points: NDArray[np.float64], slope: float, pitch: float) -> Strai
         On a grid of the rows' own interval along the line.
     """
     root = math.hypot(1.0, slope)
-    s = (points[..., 0] + slope * points[..., 1]) / root
-    t = (points[..., 1] - slope * points[..., 0]) / root
     step = pitch * root
-    valid = np.isfinite(t)
-    start = max(float(s[k][valid[k]][0]) for k in (0, 1))
-    stop = min(float(s[k][valid[k]][-1]) for k in (0, 1))
-    grid = start + step * np.arange(max(int((stop - start) / step + 1e-6) + 1, 1))
-    edges, transfers = [], []
-    for k in (0, 1):
-        edge, transfer = _on_grid(s[k][valid[k]], t[k][valid[k]], grid, step)
-        edges.append(edge)
-        transfers.append(transfer)
-    return Straightened(s=grid, left=edges[0], right=edges[1], step=step, slope=slope, transfer=np.array(transfers))
+    sides = []
+    for along, across in (edge[np.isfinite(edge[:, 1])].T for edge in points):
+        sides.append(((along + slope * across) / root, (across - slope * along) / root))
+    # Half way between the edges' own ends, so that no row is lost to their being out of step.
+    start, stop = (sum(float(s[end]) for s, _ in sides) / 2 for end in (0, -1))
+    grid = start + step * np.arange(max(round((stop - start) / step) + 1, 1))
+    (left, left_gain), (right, right_gain) = (_on_grid(s, t, grid, step) for s, t in sides)
+    return Straightened(
+        s=grid, left=left, right=right, step=step, slope=slope, transfer=np.array([left_gain, right_gain])
+    )
 
 
 def _on_grid(
     s: NDArray[np.float64], t: NDArray[np.float64], grid: NDArray[np.float64], step: float
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Bring samples onto a grid by a cubic spline through them; keep gaps as gaps."""
-    order = np.argsort(s, kind="stable")
-    s, t = s[order], t[order]
-    nearest = np.clip(np.rint((s - grid[0]) / step).astype(np.intp), 0, len(grid) - 1)
-    offset = (s - grid[nearest]) / step
+    place = (s - grid[0]) / step
+    nearest = np.rint(place)
+    offset = place - nearest
     frequency = np.arange(len(grid) // 2 + 1) / len(grid)
     result = np.full(len(grid), np.nan)
-    if np.abs(offset[(s >= grid[0] - step / 2) & (s <= grid[-1] + step / 2)]).max(initial=0.0) < _ON_GRID:
-        result[nearest] = t
+    if np.abs(offset).max() < _ON_GRID:
+        inside = (nearest >= 0) & (nearest < len(grid))
+        result[nearest[inside].astype(np.intp)] = t[inside]
         return result, np.ones(len(frequency))
+    order = np.argsort(s, kind="stable")
+    s, t = s[order], t[order]
     # Two samples almost at one place would make the spline swing: a steep edge has them.
     apart = np.concatenate([[True], np.diff(s) > step / 4])
     s, t = s[apart], t[apart]

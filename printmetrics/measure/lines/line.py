@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import ndtri
 
+from printmetrics.analysis.process import palasantzas_autocovariance
 from printmetrics.analysis.roughness import Process, Record, amplitude_filter, fit_spectra, u_mean, unbiased_sd
 from printmetrics.errors import FeatureError
 from printmetrics.flags import Flag
@@ -19,6 +20,7 @@ from printmetrics.quantities import CATALOGUE
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from printmetrics.analysis.tracing import EdgeShape
     from printmetrics.measure.lines.options import LinesOptions
     from printmetrics.measure.lines.seeing import Seen
     from printmetrics.measure.sight import Sight
@@ -28,13 +30,18 @@ NECK_BLURS = 4.0  # default neck_length
 _LEVEL_SHARE = 0.1  # of a level's distance from mid-level that an edge unlike a Gaussian may shift it
 _SATURATED = 0.01
 _LOW_CONTRAST = 4.0
-_RESOLVED_BLURS = 2.6
+_RESOLVED_BLURS = 3.0
 _RESOLVED_RAYLEIGH = 0.61
 _SPACE_BLURS = 3.5
 _SLOPE_BLUR = 0.235  # edge sigma of an aberration-free objective, in wavelength / NA
 _DEFOCUSED = 2.0
 _UNEVEN = 0.25
-_SHARPENED = 0.02
+_SHARPENED = 0.004
+_SKEWED = 0.004
+_SKEW_SHIFT = 35.0  # shift of an edge, in blurs, per skew: measured on gamma 1.2 and 2.2 left in
+_TYPICAL_ROWS = 128
+_NONLINEAR = 0.6  # rms move of an edge within one blur along it, over the blur
+END_SHARE = 0.4  # of a blur: light from beyond its end mixes into the mean of a piece
 _MISMATCH = 0.25
 _MATTERS = 0.04
 _GAPS = 0.2
@@ -61,8 +68,8 @@ class LineFigures:
         Of one edge point, from pixel noise.
     blur, u_blur : ndarray of float, shape (2,)
         Gaussian sigma of either edge, across the line, and its standard uncertainty from pixel noise.
-    shape_shift : ndarray of float, shape (2,)
-        How far either edge's middle lies off the model's.
+    u_shape : ndarray of float, shape (2,)
+        Standard uncertainty of either edge's mean position because its shape isn't the model's.
     level_shift : float
         By how much the width at the recipe's edge level exceeds that at mid-level.
     flags : Flag
@@ -81,7 +88,7 @@ class LineFigures:
     u_point: NDArray[np.float64]
     blur: NDArray[np.float64]
     u_blur: NDArray[np.float64]
-    shape_shift: NDArray[np.float64]
+    u_shape: NDArray[np.float64]
     level_shift: float
     flags: Flag
     width: Process | None = None
@@ -181,6 +188,8 @@ def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFi
     start = seen.origin[0 if seen.direction.vertical else 1]
     points = np.stack([np.column_stack([rows * along, (edge + start) * across]) for edge in trace.edges])
     points[:, ~np.isfinite(trace.edges).all(axis=0)] = np.nan
+    if np.isfinite(points[0, ~seen.spoiled[k], 1]).any():
+        points[:, seen.spoiled[k]] = np.nan
     clean, hit = points, seen.hit[k]
     if hit.any() and np.isfinite(points[:, ~hit, 1]).sum() > np.isfinite(points[..., 1]).sum() / 4:
         clean = points.copy()
@@ -198,10 +207,15 @@ def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFi
         u_point=u_point,
         blur=blur,
         u_blur=trace.u_blur * normal,
-        shape_shift=trace.shape_shift * normal,
+        u_shape=np.array([_u_shape(shape, b) for shape, b in zip(trace.shapes, trace.blur, strict=True)]) * normal,
         level_shift=level_shift(blur, options.edge_level, bright=options.ink == "bright"),
         flags=_flags(seen, k, sight, blur, options),
     )
+
+
+def _u_shape(shape: EdgeShape, blur: float) -> float:
+    """Return the standard uncertainty of an edge's position along the row from its shape. [px]."""
+    return math.hypot(abs(shape.shift) / _SQRT3, _SKEW_SHIFT * abs(shape.skew) * blur / _SQRT3, shape.steady)
 
 
 def _record(line: LineFigures, name: str, blur: float) -> Record | None:
@@ -222,7 +236,10 @@ def _record(line: LineFigures, name: str, blur: float) -> Record | None:
     noise = float(np.sqrt((line.u_point**2).mean())) if side is None else float(line.u_point[side])
     try:
         return Record(
-            data=part, step=straight.step, blur=blur, noise_expected=max(noise, 1e-12),
+            data=part,
+            step=straight.step,
+            blur=blur,
+            noise_expected=max(noise, 1e-12),
             noise_multiplicity=2 if side is None else 1,
             noise_transfer=straight.width_transfer if side is None else straight.transfer[side],
             line_removed=side is not None,
@@ -239,8 +256,10 @@ def _flags(seen: Seen, k: int, sight: Sight, blur: NDArray[np.float64], options:
         flags |= Flag.LOW_CONTRAST
     if trace.bare_range > _UNEVEN * contrast:
         flags |= Flag.UNEVEN_LIGHT
-    if trace.overshoot > _SHARPENED:
+    if np.mean([shape.overshoot for shape in trace.shapes]) > _SHARPENED:
         flags |= Flag.SHARPENED
+    if abs(np.mean([shape.skew for shape in trace.shapes])) > _SKEWED:
+        flags |= Flag.OUTSIDE_VALIDITY
     if not trace.way.all():
         flags |= Flag.CUT_BY_BORDER
     sigma = float(trace.blur.max())
@@ -250,7 +269,9 @@ def _flags(seen: Seen, k: int, sight: Sight, blur: NDArray[np.float64], options:
     for j in (k - 1, k + 1):
         if 0 <= j < len(seen.traces):
             low, high = sorted((k, j))
-            space = float(np.nanmedian(seen.traces[high].course[0] - seen.traces[low].course[1]))
+            every = max(1, len(trace.way) // _TYPICAL_ROWS)
+            gap = seen.traces[high].course[0, ::every] - seen.traces[low].course[1, ::every]
+            space = float(np.median(gap))
             if space < _SPACE_BLURS * sigma:
                 flags |= Flag.LEVELS_UNRESOLVED
     if sight.na is not None and sight.wavelength_um is not None and sight.scale.unit == "um":
@@ -308,7 +329,10 @@ class _LineReadings:
     def __init__(self, line: LineFigures, seen: Seen, sight: Sight, options: LinesOptions) -> None:
         self.line, self.seen, self.scale, self.options = line, seen, sight.scale, options
         self.width = line.straight.width
-        self.mid_mean = float(np.nanmean(self.width))
+        known = np.isfinite(self.width)
+        self.count = int(known.sum())
+        self.mid_mean = float(self.width[known].mean())
+        self.u_shape = float(line.u_shape.sum())  # both edges have their shape from the same ink, light and lens
         self.mean = self.mid_mean + line.level_shift
         self.readings: list[Reading] = []
         self.rough = unbiased_sd(self.width, line.width) if line.width is not None else None
@@ -318,8 +342,16 @@ class _LineReadings:
         self.opens = sum(d.kind == "open" for d in own)
 
     def add(
-        self, quantity: str, value: float | None, *, noise: float | None = None, sampling: float | None = None,
-        model: float = 0.0, dof: float = math.inf, flags: Flag = Flag.NONE, scaled: bool = True,
+        self,
+        quantity: str,
+        value: float | None,
+        *,
+        noise: float | None = None,
+        sampling: float | None = None,
+        model: float = 0.0,
+        dof: float = math.inf,
+        flags: Flag = Flag.NONE,
+        scaled: bool = True,
     ) -> None:
         """Add a reading; the scale's share of the uncertainty is joined to the model's."""
         common = None
@@ -327,24 +359,34 @@ class _LineReadings:
             common = math.hypot(model, abs(value) * self.scale.u_relative if scaled else 0.0)
         self.readings.append(
             Reading(
-                item=self.line.name, quantity=quantity, value=value,
+                item=self.line.name,
+                quantity=quantity,
+                value=value,
                 unit=CATALOGUE["lines"][quantity].unit(self.scale.unit),
-                u_noise=noise, u_sampling=sampling, u_common=common, dof=dof, flags=self.line.flags | flags,
-                eval_length=self.line.length, sampling=self.line.straight.step,
+                u_noise=noise,
+                u_sampling=sampling,
+                u_common=common,
+                dof=dof,
+                flags=self.line.flags | flags,
+                eval_length=self.line.length,
+                sampling=self.line.straight.step,
             )
         )
 
     def _rough_flags(self) -> Flag:
-        """Doubts about roughness: length, gaps, and noise that isn't what the pixels' noise predicts."""
-        process, flags = self.line.width, Flag.NONE
+        """Doubts about roughness: length, gaps, steep edges, and noise that isn't what the pixels' noise predicts."""
+        line, process, flags = self.line, self.line.width, Flag.NONE
         if process is None or process.short:
             flags |= Flag.SHORT_SAMPLING
         if process is not None:
-            predicted = float(np.sqrt((self.line.u_point**2).mean()))
+            predicted = float(np.sqrt((line.u_point**2).mean()))
             off = 2.0 * abs(process.noise**2 - predicted**2)
             if abs(math.log(process.noise / max(predicted, 1e-12))) > _MISMATCH and off > _MATTERS * process.sigma**2:
                 flags |= Flag.OUTSIDE_VALIDITY
-        missing = 1.0 - float(np.isfinite(self.width).mean())
+        blur = float(line.blur.mean())
+        if any(move_within(edge, blur) > _NONLINEAR * blur for edge in (line.left, line.right) if edge is not None):
+            flags |= Flag.OUTSIDE_VALIDITY
+        missing = 1.0 - self.count / len(self.width)
         return flags | (Flag.OUTSIDE_VALIDITY if missing > _GAPS else Flag.NONE)
 
     def all(self) -> list[Reading]:
@@ -354,7 +396,7 @@ class _LineReadings:
         self._roughness()
         self._process()
         line = self.line
-        self.add("edge_blur", float(line.blur.mean()), noise=float(np.hypot(*line.u_blur)) / 2)
+        self._blur()
         self._tilt()
         self.add("length", line.length, noise=line.straight.step / math.sqrt(6.0))
         self.add("open_count", float(self.opens))
@@ -370,62 +412,81 @@ class _LineReadings:
 
     def _widths(self) -> None:
         line = self.line
-        noise = math.sqrt(max(float(line.covariance[0, 0] + line.covariance[1, 1] - 2 * line.covariance[0, 1]), 0.0))
+        pixels = math.sqrt(max(float(line.covariance[0, 0] + line.covariance[1, 1] - 2 * line.covariance[0, 1]), 0.0))
+        blur = float(line.blur.mean())
+        ends = END_SHARE * blur * math.sqrt(2.0) * move_within(line.width, blur) / line.length if line.width else 0.0
+        self.u_mean_noise = math.hypot(pixels, ends)
         sampling, sampling_dof, doubt = self._sampling()
-        shape = abs(float(line.shape_shift[1] - line.shape_shift[0])) / _SQRT3
         bright = self.options.ink == "bright"
         hardcopy = level_shift(line.blur, HARDCOPY_LEVEL, bright=bright)
         for quantity, shift in (("width_mean", line.level_shift), ("width_r40", hardcopy)):
             value = self.mid_mean + shift
-            model = math.hypot(shape, _LEVEL_SHARE * shift)
+            model = math.hypot(self.u_shape, _LEVEL_SHARE * shift)
             common = math.hypot(model, value * self.scale.u_relative)
-            dof = effective_dof([(noise, math.inf), (sampling or 0.0, sampling_dof), (common, math.inf)])
-            self.add(quantity, value, noise=noise, sampling=sampling, model=model, dof=dof, flags=doubt)
+            dof = effective_dof([(self.u_mean_noise, math.inf), (sampling or 0.0, sampling_dof), (common, math.inf)])
+            self.add(quantity, value, noise=self.u_mean_noise, sampling=sampling, model=model, dof=dof, flags=doubt)
 
     def _extremes(self) -> None:
         """Extremes and the harmonic mean, freed of the noise's share; what stands out of the noise is kept as seen."""
-        line, step = self.line, self.line.straight.step
+        line, step, process = self.line, self.line.straight.step, self.line.width
         neck = self.options.neck_length or NECK_BLURS * float(line.blur.mean())
         whole = line.whole.width + line.level_shift
         count = max(1, round(neck / step))
         raw = running_mean(whole, count)
         flags = self.rough_flags & ~Flag.SHORT_SAMPLING
         base = self.width + line.level_shift
-        shape = abs(float(line.shape_shift[1] - line.shape_shift[0])) / _SQRT3
-        if line.width is not None:
+        if process is not None:
             (averaged, true), (u_local, _) = amplitude_filter(
-                base, line.width, average_over=[neck, 0.0], noise_transfer=line.straight.width_transfer
+                base, process, average_over=[neck, 0.0], noise_transfer=line.straight.width_transfer
             )
-            u_raw = math.sqrt(2.0) * line.width.noise / math.sqrt(count)
+            u_raw = math.sqrt(2.0) * process.noise / math.sqrt(count)
         else:
             averaged, true, u_local, u_raw = raw, base, 0.0, 0.0
-        low, high = float(np.nanmin(averaged)), float(np.nanmax(averaged))
-        raw_low, raw_high = float(np.nanmin(raw)), float(np.nanmax(raw))
-        for name, value, seen, sign in (("width_min", low, raw_low, -1), ("width_max", high, raw_high, 1)):
+        # How deep an extreme lies is known no better than the scatter it belongs to.
+        doubt = min(self.rough.u_noise / self.rough.sd, 1.0) if self.rough is not None and self.rough.sd > 0 else 1.0
+        for name, pick, sign in (("width_min", np.nanmin, -1), ("width_max", np.nanmax, 1)):
+            value, seen = float(pick(averaged)), float(pick(raw))
             stands_out = sign * (seen - value) > _STANDS_OUT * u_raw
-            self.add(
-                name, 0.0 if name == "width_min" and self.opens else seen if stands_out else value,
-                noise=u_raw if stands_out else float(u_local), model=shape, flags=flags,
-            )
+            u = u_raw if stands_out else math.hypot(float(u_local), doubt * (value - self.mean))
+            opened = name == "width_min" and self.opens > 0
+            value = 0.0 if opened else seen if stands_out else value
+            self.add(name, value, noise=0.0 if opened else u, model=0.0 if opened else self.u_shape, flags=flags)
         hit = np.isfinite(line.whole.width) & ~_covered(line.whole.s, line.straight)
         local = np.concatenate([true[np.isfinite(true)], whole[hit]])
-        sampling, sampling_dof, doubt = self._sampling()
-        mean_noise = next(r.u_noise for r in self.readings if r.quantity == "width_mean") or 0.0
+        sampling, sampling_dof, unsure = self._sampling()
         if self.opens:
-            self.add("width_harmonic", 0.0, noise=mean_noise, flags=doubt)
+            self.add("width_harmonic", 0.0, noise=0.0, flags=unsure)
         elif local.min() <= 0:
             self.add("width_harmonic", None, flags=flags | Flag.OUTSIDE_VALIDITY)
         else:
             value = 1.0 / float(np.mean(1.0 / local))
             u_spread = 2.0 * self.rough.sd * self.rough.u_noise / self.mean if self.rough is not None else 0.0
-            noise = math.hypot(mean_noise, u_spread)
+            noise = math.hypot(self.u_mean_noise, u_spread)
             dof = effective_dof([(noise, math.inf), (sampling or 0.0, sampling_dof)])
-            self.add("width_harmonic", value, noise=noise, sampling=sampling, model=shape, dof=dof, flags=flags | doubt)
+            self.add(
+                "width_harmonic",
+                value,
+                noise=noise,
+                sampling=sampling,
+                model=self.u_shape,
+                dof=dof,
+                flags=flags | unsure,
+            )
+
+    def _blur(self) -> None:
+        """Blur of the edges, freed of the roughness that is finer than itself and widens it."""
+        line = self.line
+        seen = float(line.blur.mean())
+        edges = [p for p in (line.left, line.right) if p is not None]
+        finer = sum(p.sigma**2 * (1.0 - p.kept) for p in edges) / max(len(edges), 1)
+        blur = math.sqrt(max(seen**2 - finer, (seen / 2) ** 2))
+        self.add("edge_blur", blur, noise=float(np.hypot(*line.u_blur)) / 2, model=(seen - blur) / 2)
 
     def _roughness(self) -> None:
         line, straight = self.line, self.line.straight
         for prefix, values, process in (
-            ("lwr", straight.width, line.width), ("ler_left", straight.left, line.left),
+            ("lwr", straight.width, line.width),
+            ("ler_left", straight.left, line.left),
             ("ler_right", straight.right, line.right),
         ):
             side = prefix.removeprefix("ler_") if prefix != "lwr" else ""
@@ -461,7 +522,9 @@ class _LineReadings:
         self.add("lwr_3sigma_long", 3 * process.sigma, noise=0.0, sampling=3 * process.u_sigma, flags=flags)
         if process.resolved:
             self.add("correlation_length", process.xi, noise=0.0, sampling=process.u_xi, flags=flags)
-            self.add("roughness_exponent", process.hurst, noise=0.0, sampling=process.u_hurst, flags=flags, scaled=False)
+            self.add(
+                "roughness_exponent", process.hurst, noise=0.0, sampling=process.u_hurst, flags=flags, scaled=False
+            )
         else:
             for name in names[1:3]:
                 self.add(name, None, flags=flags | Flag.LOW_CONTRAST)
@@ -471,11 +534,30 @@ class _LineReadings:
         line, straight = self.line, self.line.straight
         vertical = self.seen.direction.vertical
         tilt = -math.degrees(math.atan(straight.slope)) if vertical else math.degrees(math.atan(straight.slope))
-        n, length = max(int(np.isfinite(straight.width).sum()), 2), max(line.length, straight.step)
+        n, length = max(self.count, 2), max(line.length, straight.step)
         lever = math.sqrt(12.0) / length
         noise = math.degrees(lever * math.sqrt(float((line.u_point**2).sum()) / 4 / n))
         sampling = math.degrees(lever * math.sqrt(line.centre_variance)) if line.mean_u else None
         self.add("tilt", tilt, noise=noise, sampling=sampling, scaled=False)
+
+
+def move_within(process: Process, distance: float) -> float:
+    """Return the rms difference of two places of a process some distance apart.
+
+    Parameters
+    ----------
+    process : Process
+        As fitted.
+    distance : float
+        Of the places. [length]
+
+    Returns
+    -------
+    float
+        sqrt(2 (C(0) - C(distance))). [length]
+    """
+    apart = palasantzas_autocovariance(np.array([distance]), process.sigma, process.xi, process.hurst)[0]
+    return math.sqrt(max(2.0 * (process.sigma**2 - float(apart)), 0.0))
 
 
 def _sd(values: NDArray[np.float64], *, line_removed: bool) -> float:

@@ -8,7 +8,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from printmetrics.flags import Flag
-from printmetrics.measure.lines.line import NECK_BLURS, LineFigures, running_mean
+from printmetrics.analysis.roughness import Process, amplitude_filter, unbiased_sd
+from printmetrics.measure.lines.line import END_SHARE, NECK_BLURS, LineFigures, move_within, running_mean
 from printmetrics.measure.readings import Reading, effective_dof
 from printmetrics.quantities import CATALOGUE
 
@@ -20,7 +21,6 @@ if TYPE_CHECKING:
     from printmetrics.measure.lines.seeing import Seen
     from printmetrics.measure.sight import Sight
 
-_SQRT3 = math.sqrt(3.0)
 _STANDS_OUT = 5.0
 
 
@@ -68,62 +68,71 @@ def neighbour_readings(
     if length == 0.0:
         withheld = {"flags": flags | Flag.OUTSIDE_VALIDITY}
         return [*(reading(q, None, **withheld) for q in ("pitch", "space_mean", "space_min")), count]
-    centre = far.mean(axis=0) - near.mean(axis=0)
-    pitch = float(np.nanmean(centre))
-    space = far[0] - near[1] - (one.level_shift + two.level_shift) / 2
-    mean = float(np.nanmean(space))
+    pitch = float(np.nanmean(far.mean(axis=0) - near.mean(axis=0)))
+    shift = (one.level_shift + two.level_shift) / 2
+    mean = float(np.nanmean(far[0] - near[1])) - shift
     noise_pitch = math.sqrt(max(sum(float(f.covariance.sum()) / 4 for f in (one, two)), 0.0))
     noise = math.sqrt(float(one.covariance[1, 1] + two.covariance[0, 0]))
     scale = sight.scale.u_relative
-    shape = abs(float(two.shape_shift[0] - one.shape_shift[1])) / _SQRT3
-    common = math.hypot(mean * scale, shape)
-    readings = []
-    sampling = dof = wander = None
-    u_point = 0.0
+    shape = float(one.u_shape[1] + two.u_shape[0])
+    common, common_pitch = math.hypot(mean * scale, shape), pitch * scale
+    sampling = wander = None
+    dof = dof_pitch = math.inf
     if one.mean_u and two.mean_u and one.right and two.left:
+        blur = float(one.blur[1])
+        ends = [END_SHARE * blur * math.sqrt(2.0) * move_within(p, blur) / length for p in (one.right, two.left)]
+        noise, noise_pitch = math.hypot(noise, *ends), math.hypot(noise_pitch, *ends)
         wander = math.sqrt(one.centre_variance + two.centre_variance)
         (u_one, dof_one), (u_two, dof_two) = one.mean_u["right"], two.mean_u["left"]
         sampling = math.hypot(u_one, u_two)
         dof = effective_dof([(noise, math.inf), (u_one, dof_one), (u_two, dof_two), (common, math.inf)])
-        u_point = math.hypot(one.right.noise, two.left.noise)
+        parts = [(math.sqrt(f.centre_variance), f.mean_u["left"][1] + f.mean_u["right"][1]) for f in (one, two)]
+        dof_pitch = effective_dof([*parts, (math.hypot(noise_pitch, common_pitch), math.inf)])
     elif any(float(np.nanstd(e)) > 0 for e in (near[1], far[0])):
         flags |= Flag.SHORT_SAMPLING | Flag.OUTSIDE_VALIDITY
-    readings.append(
-        reading("pitch", pitch, u_noise=noise_pitch, u_sampling=wander, u_common=pitch * scale, flags=flags)
-    )
-    readings.append(
+    least, u_least = _least_space(one, two, options, mean + shift)
+    least -= shift
+    return [
         reading(
-            "space_mean",
-            mean,
-            u_noise=noise,
-            u_sampling=sampling,
-            u_common=common,
-            dof=math.inf if dof is None else dof,
-            flags=flags,
-        )
-    )
-    readings.append(_least(reading, one, two, options, u_point, mean, bridges, shape, flags))
-    return [*readings, count]
+            "pitch", pitch, u_noise=noise_pitch, u_sampling=wander, u_common=common_pitch, dof=dof_pitch, flags=flags
+        ),
+        reading("space_mean", mean, u_noise=noise, u_sampling=sampling, u_common=common, dof=dof, flags=flags),
+        reading("space_min", 0.0, u_noise=0.0, flags=flags)
+        if bridges
+        else reading("space_min", least, u_noise=u_least, u_common=math.hypot(least * scale, shape), flags=flags),
+        count,
+    ]
 
 
-def _least(reading, one, two, options, u_point, mean, bridges, shape, flags):  # type: ignore[no-untyped-def]  # noqa: ANN001, ANN202, PLR0913
-    """Return the least local space: 0 at a bridge; elsewhere freed of the noise's share."""
-    if bridges:
-        return reading("space_min", 0.0, u_noise=0.0, flags=flags)
+def _least_space(one: LineFigures, two: LineFigures, options: LinesOptions, mean: float) -> tuple[float, float]:
+    """Return the least local space and its standard uncertainty, freed of the noise's share in its depth."""
     near, far = _on_common_axis(one.whole, two.whole)
-    space = far[0] - near[1] - (one.level_shift + two.level_shift) / 2
-    neck = options.neck_length or NECK_BLURS * float((one.blur[1] + two.blur[0]) / 2)
+    neck = options.neck_length or NECK_BLURS * float(one.blur[1] + two.blur[0]) / 2
     count = max(1, round(neck / one.straight.step))
-    local = running_mean(space, count)
-    u_raw = u_point / math.sqrt(count)
-    least = float(np.nanmin(local))
-    # The noise's share of the scatter is taken out of the depth, unless the place stands out of the noise.
-    spread = float(np.nanstd(local))
-    true = math.sqrt(max(spread**2 - u_raw**2, 0.0))
-    freed = mean - (mean - least) * (true / spread if spread > 0 else 1.0)
-    if freed - least > _STANDS_OUT * u_raw:
-        freed = least
-    return reading("space_min", freed, u_noise=u_raw, u_common=math.hypot(shape, 0.0), flags=flags)
+    raw = float(np.nanmin(running_mean(far[0] - near[1], count)))
+    if one.right is None or two.left is None:
+        return raw, 0.0
+    if one.whole is not one.straight or two.whole is not two.straight:
+        near, far = _on_common_axis(one.straight, two.straight)
+    sides = ((far[0], two.left, two.straight.transfer[0]), (near[1], one.right, one.straight.transfer[1]))
+    (freed, u_freed), (taken, u_taken) = (_local(*side, neck) for side in sides)
+    value = float(np.nanmin(freed - taken))
+    u_raw = math.hypot(two.left.noise, one.right.noise) / math.sqrt(count)
+    if value - raw > _STANDS_OUT * u_raw:
+        return raw, u_raw
+    # How deep it lies is known no better than the scatter it belongs to.
+    rough = [unbiased_sd(edge, process) for edge, process, _ in sides]
+    total = math.hypot(*(r.sd for r in rough))
+    doubt = min(math.hypot(*(r.sd * r.u_noise for r in rough)) / total**2, 1.0) if total > 0 else 1.0
+    return value, math.hypot(u_freed, u_taken, doubt * (mean - value))
+
+
+def _local(
+    edge: NDArray[np.float64], process: Process, transfer: NDArray[np.float64], neck: float
+) -> tuple[NDArray[np.float64], float]:
+    """Return an edge averaged over the neck length and freed of noise, with the uncertainty of one place."""
+    (local,), (u,) = amplitude_filter(edge, process, average_over=[neck], noise_transfer=transfer)
+    return local, float(u)
 
 
 def _on_common_axis(one: Straightened, two: Straightened) -> tuple[NDArray[np.float64], NDArray[np.float64]]:

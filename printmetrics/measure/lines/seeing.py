@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from printmetrics.measure.sight import Sight
 
 _SMALLEST_PX = 16
+_SPOILING = ("open", "bridge", "satellite")  # a neck or a bulge is still the line's width
 _RIVAL = 0.7  # edges along the other axis this strong leave the direction open
 _SLACK_ROWS, _SLACK_SD = 512, 4.5  # an edge this many sd off its course is a defect's, not rough
 _UNEVEN = 0.1  # a bare level that varies by this part of the contrast takes a threshold that follows it
@@ -46,8 +47,8 @@ class Seen:
         The lines.
     defects : list of Defect
         In the turned region's pixels.
-    hit : ndarray of bool, shape (K, M)
-        Rows of each line in which an edge is a defect's.
+    hit, spoiled : ndarray of bool, shape (K, M)
+        Rows of each line in which an edge is a defect's; of these, those in which it isn't the line's edge at all.
     count : int
         Lines found.
     expected : int or None
@@ -62,6 +63,7 @@ class Seen:
     traces: list[Trace]
     defects: list[Defect]
     hit: NDArray[np.bool_]
+    spoiled: NDArray[np.bool_]
     ink: NDArray[Any]
     count: int
     expected: int | None
@@ -109,7 +111,7 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
     edges, coarse = np.concatenate([t.edges for t in traces]), np.concatenate([t.course for t in traces])
     course = smooth_courses(edges, coarse).reshape(len(traces), 2, -1)
     ink = _ink(image, traces, bright=options.ink == "bright")
-    defects, hit = _defects(ink, course, traces)
+    defects, hit, spoiled = _defects(ink, course, traces)
     return Seen(
         direction=direction,
         origin=origin,
@@ -119,6 +121,7 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
         traces=traces,
         defects=defects,
         hit=hit,
+        spoiled=spoiled,
         ink=ink,
         count=len(traces),
         expected=expected,
@@ -266,8 +269,8 @@ def _threshold_map(shape: tuple[int, ...], traces: list[Trace]) -> NDArray[np.fl
 
 def _defects(
     ink: NDArray[Any], course: NDArray[np.float64], traces: list[Trace]
-) -> tuple[list[Defect], NDArray[np.bool_]]:
-    """Find defects, and the rows of each line that they spoil."""
+) -> tuple[list[Defect], NDArray[np.bool_], NDArray[np.bool_]]:
+    """Find defects, the rows of each line that they hit, and those that they spoil."""
     way = np.array([t.way for t in traces])
     left, right = course[:, 0], course[:, 1]
     slack = _slack(course, traces)
@@ -277,13 +280,15 @@ def _defects(
     margin = max(min([*space, 2 * width]), 0.0)
     found = find_defects(ink, left, right, way, slack, margin, max(6.0, 2.5 * blur * blur))
     hit = np.zeros((len(traces), ink.shape[0]), bool)
+    spoiled = np.zeros_like(hit)
     for defect in found:
         reach = window_half(blur)
         rows = slice(max(defect.rows[0] - reach, 0), defect.rows[1] + reach + 1)
         near = _concerned(defect, left, right, blur)
         for k in near:
             hit[k, rows] = True
-    return found, hit
+            spoiled[k, rows] |= defect.kind in _SPOILING
+    return found, hit, spoiled
 
 
 def _concerned(defect: Defect, left: NDArray[np.float64], right: NDArray[np.float64], blur: float) -> list[int]:
