@@ -300,15 +300,24 @@ class _Chain:
 
 def _distance(expected: NDArray[np.float64], seen: NDArray[np.float64], slack: float) -> NDArray[np.float64]:
     """Return how far each piece is from each line expected; infinite where it can't be that line."""
-    width = expected[:, 1] - expected[:, 0]
-    worst = np.abs(seen - expected[:, None]).max(axis=2)
-    return np.where(worst <= np.minimum(slack + 0.3 * width, 0.5 * width + 1.5)[:, None], worst, np.inf)
+    return _distance_of_pairs(expected[:, None], seen[None], slack)
+
+
+def _distance_of_pairs(expected: NDArray[np.float64], seen: NDArray[np.float64], slack: float) -> NDArray[np.float64]:
+    width = expected[..., 1] - expected[..., 0]
+    off = np.abs(seen - expected)
+    worst = np.maximum(off[..., 0], off[..., 1])
+    return np.where(worst <= np.minimum(slack + 0.3 * width, 0.5 * width + 1.5), worst, np.inf)
 
 
 def _match(expected: NDArray[np.float64], seen: NDArray[np.float64]) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
     """Pair lines with the pieces that continue them, each piece with its nearest line."""
     if not len(expected) or not len(seen):
         return np.empty(0, np.intp), np.empty(0, np.intp)
+    if len(expected) == len(seen):
+        own = _distance_of_pairs(expected, seen, 2.0)
+        if np.isfinite(own).all():  # all lines go on, in order
+            return np.arange(len(seen)), np.arange(len(seen))
     distance = _distance(expected, seen, 2.0)
     nearest = distance.argmin(axis=1)
     least = distance[np.arange(len(expected)), nearest]

@@ -164,8 +164,8 @@ def line_figures(seen: Seen, sight: Sight, options: LinesOptions) -> list[LineFi
     along, across = (sight.scale.y, sight.scale.x) if seen.direction.vertical else (sight.scale.x, sight.scale.y)
     records = {}
     for k, line in enumerate(lines):
-        # The same optics blur the edge along the line.
-        around = float(line.blur.mean()) * along / across
+        # The same optics blur the edge along the line; so do rows added up.
+        around = along * math.hypot(float(line.blur.mean()) / across, math.sqrt((seen.row_step**2 - 1) / 12))
         for name in _SERIES:
             record = _record(line, name, around)
             if record is not None:
@@ -184,7 +184,8 @@ def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFi
     """Bring one traced line into lengths; its roughness is yet to be fitted."""
     trace, scale = seen.traces[k], sight.scale
     along, across = (scale.y, scale.x) if seen.direction.vertical else (scale.x, scale.y)
-    rows = np.arange(trace.edges.shape[1], dtype=np.float64) + seen.origin[1 if seen.direction.vertical else 0]
+    rows = seen.to_rows(np.arange(trace.edges.shape[1], dtype=np.float64))
+    rows += seen.origin[1 if seen.direction.vertical else 0]
     start = seen.origin[0 if seen.direction.vertical else 1]
     points = np.stack([np.column_stack([rows * along, (edge + start) * across]) for edge in trace.edges])
     points[:, ~np.isfinite(trace.edges).all(axis=0)] = np.nan
@@ -195,14 +196,14 @@ def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFi
         clean = points.copy()
         clean[:, hit] = np.nan
     slope = slope_of(clean)
-    straight = straighten(clean, slope, along)
+    straight = straighten(clean, slope, along * seen.row_step)
     normal = across / math.hypot(1.0, slope)  # length across the line per pixel along the row
     blur = trace.blur * normal
     u_point = trace.u_row * normal
     return LineFigures(
         name=seen.names[k],
         straight=straight,
-        whole=straight if clean is points else straighten(points, slope, along),
+        whole=straight if clean is points else straighten(points, slope, along * seen.row_step),
         covariance=trace.covariance * normal**2,
         u_point=u_point,
         blur=blur,

@@ -127,6 +127,6 @@ def _event(defect: Defect, seen: Seen, figures: list[LineFigures], sight: Sight)
         event=defect.kind,
         x_px=float(x),
         y_px=float(y),
-        size=defect.extent * along * math.hypot(1.0, line.straight.slope),
-        area=defect.area * sight.scale.x * sight.scale.y,
+        size=defect.extent * seen.row_step * along * math.hypot(1.0, line.straight.slope),
+        area=defect.area * seen.row_step * sight.scale.x * sight.scale.y,
     )

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from printmetrics.measure.sight import Sight
 
 _SMALLEST_PX = 16
+_TALL_PX, _UPRIGHT = 2000, 0.1  # from so many rows on, and up to this slope, pairs of rows are added up
 _SPOILING = ("open", "bridge", "satellite")  # a neck or a bulge is still the line's width
 _RIVAL = 0.7  # edges along the other axis this strong leave the direction open
 _SLACK_ROWS, _SLACK_SD = 512, 4.5  # an edge this many sd off its course is a defect's, not rough
@@ -41,6 +42,8 @@ class Seen:
         Column and row of the region in the picture. [px]
     image : ndarray, shape (M, N)
         The region, turned so that the lines run along its columns. [counts]
+    row_step : int
+        Rows of the picture in one row of `image`: 2 where pairs of rows were added up.
     names : list of str
         Name of each line, in order of place.
     traces : list of Trace
@@ -58,6 +61,7 @@ class Seen:
     direction: Direction
     origin: tuple[int, int]
     image: NDArray[Any]
+    row_step: int
     saturated: NDArray[np.bool_] | None
     names: list[str]
     traces: list[Trace]
@@ -70,8 +74,13 @@ class Seen:
 
     def to_picture(self, along: NDArray[np.float64], across: NDArray[np.float64]) -> NDArray[np.float64]:
         """Turn rows and columns of the region into x and y of the picture, shape (n, 2). [px]"""
+        along = self.to_rows(along)
         x, y = (across, along) if self.direction.vertical else (along, across)
         return np.column_stack([x + self.origin[0], y + self.origin[1]])
+
+    def to_rows(self, along: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Turn rows of `image` into rows of the region. [px]."""
+        return along * self.row_step + (self.row_step - 1) / 2
 
 
 def see_lines(sight: Sight, options: LinesOptions) -> Seen:
@@ -99,9 +108,11 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
     if sight.saturated is not None:
         rows = slice(origin[1], origin[1] + part.shape[0])
         saturated = sight.saturated[rows, origin[0] : origin[0] + part.shape[1]]
-    direction, image, found = _find(part, options)
-    if saturated is not None and not direction.vertical:
-        saturated = saturated.T
+    direction, image, found, row_step = _find(part, options)
+    if saturated is not None:
+        saturated = saturated if direction.vertical else saturated.T
+        if row_step > 1:
+            saturated = saturated[: 2 * len(image) : 2] | saturated[1 : 2 * len(image) : 2]
     traced = [(line, trace) for line, trace in zip(found, trace_lines(image, found), strict=True) if trace is not None]
     expected = options.count if options.centres is None else len(options.centres)
     if not traced:
@@ -111,11 +122,12 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
     edges, coarse = np.concatenate([t.edges for t in traces]), np.concatenate([t.course for t in traces])
     course = smooth_courses(edges, coarse).reshape(len(traces), 2, -1)
     ink = _ink(image, traces, bright=options.ink == "bright")
-    defects, hit, spoiled = _defects(ink, course, traces)
+    defects, hit, spoiled = _defects(ink, course, traces, row_step)
     return Seen(
         direction=direction,
         origin=origin,
         image=image,
+        row_step=row_step,
         saturated=saturated,
         names=names,
         traces=traces,
@@ -147,7 +159,7 @@ def _region(sight: Sight, options: LinesOptions) -> tuple[tuple[int, int], NDArr
     return (x0, y0), part
 
 
-def _find(part: NDArray[Any], options: LinesOptions) -> tuple[Direction, NDArray[Any], list[CoarseLine]]:
+def _find(part: NDArray[Any], options: LinesOptions) -> tuple[Direction, NDArray[Any], list[CoarseLine], int]:
     """Find direction and lines; where nothing is found, look again more softly."""
     low, high, _, _ = cv2.minMaxLoc(part)
     if low == high:
@@ -161,9 +173,12 @@ def _find(part: NDArray[Any], options: LinesOptions) -> tuple[Direction, NDArray
         elif given is None and direction.rival > _RIVAL:
             continue
         image = part if direction.vertical else np.ascontiguousarray(part.T)
-        lines = find_lines(image, direction.slope, bright=options.ink == "bright", smooth=smooth)
+        step = 2 if len(image) >= _TALL_PX and abs(direction.slope) <= _UPRIGHT else 1
+        if step > 1:
+            image = _pairs_of_rows(image)
+        lines = find_lines(image, direction.slope * step, bright=options.ink == "bright", smooth=smooth)
         if lines:
-            return direction, image, lines
+            return direction, image, lines, step
     if given is None and direction.rival > _RIVAL:
         msg = (
             "edges run along both axes alike, so the lines' direction is open; "
@@ -171,6 +186,13 @@ def _find(part: NDArray[Any], options: LinesOptions) -> tuple[Direction, NDArray
         )
         raise _nothing(part, options, msg)
     raise _nothing(part, options, "no line was found")
+
+
+def _pairs_of_rows(image: NDArray[Any]) -> NDArray[Any]:
+    """Add up pairs of rows: a tall picture has more rows along an edge than its blur lets differ."""
+    even = len(image) // 2 * 2
+    sums = {"uint8": np.uint16}.get(image.dtype.name, np.float32)
+    return np.add(image[0:even:2], image[1:even:2], dtype=sums)
 
 
 @dataclass(frozen=True, slots=True)
@@ -268,7 +290,7 @@ def _threshold_map(shape: tuple[int, ...], traces: list[Trace]) -> NDArray[np.fl
 
 
 def _defects(
-    ink: NDArray[Any], course: NDArray[np.float64], traces: list[Trace]
+    ink: NDArray[Any], course: NDArray[np.float64], traces: list[Trace], row_step: int
 ) -> tuple[list[Defect], NDArray[np.bool_], NDArray[np.bool_]]:
     """Find defects, the rows of each line that they hit, and those that they spoil."""
     way = np.array([t.way for t in traces])
@@ -278,11 +300,11 @@ def _defects(
     space = [float(np.median(course[k + 1, 0] - course[k, 1])) for k in range(len(traces) - 1)]
     blur = float(np.median([t.blur.mean() for t in traces]))
     margin = max(min([*space, 2 * width]), 0.0)
-    found = find_defects(ink, left, right, way, slack, margin, max(6.0, 2.5 * blur * blur))
+    found = find_defects(ink, left, right, way, slack, margin, max(6.0, 2.5 * blur * blur) / row_step)
     hit = np.zeros((len(traces), ink.shape[0]), bool)
     spoiled = np.zeros_like(hit)
     for defect in found:
-        reach = window_half(blur)
+        reach = math.ceil(window_half(blur) / row_step)
         rows = slice(max(defect.rows[0] - reach, 0), defect.rows[1] + reach + 1)
         near = _concerned(defect, left, right, blur)
         for k in near:
