@@ -17,10 +17,9 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 
-def traced(scene: Scene, cnr: float = 50.0, *, sharpen: float = 0.0) -> tuple[list[Trace], Truth, NDArray[np.float32]]:
+def traced(scene: Scene, cnr: float = 50.0) -> tuple[list[Trace], Truth, NDArray[np.float32]]:
     rng = np.random.default_rng(3)
     image, truth = render(scene, rng)
-    image = camera.sharpen(image, sharpen, 1.5) if sharpen else image
     pixels = camera.white_noise(image, abs(scene.ink - scene.substrate) / cnr, rng).astype(np.float32)
     lines = find_lines(pixels, find_direction(pixels, vertical=True).slope, bright=scene.ink > scene.substrate)
     traces = trace_lines(pixels, lines)
@@ -100,13 +99,6 @@ def test_line_that_leaves_by_the_side_is_known_to() -> None:
     traces, _, _ = traced(lines_at(60.0, tilt_deg=20.0))
     assert not traces[0].way.all()
     assert traces[0].way.any()
-
-
-def test_overshoot_tells_of_sharpening() -> None:
-    (plain,), _, _ = traced(lines_at(0.0))
-    (sharp,), _, _ = traced(lines_at(0.0), sharpen=1.0)
-    assert abs(plain.overshoot) < 0.01
-    assert sharp.overshoot > 0.01
 
 
 def test_picture_is_not_written_to() -> None:

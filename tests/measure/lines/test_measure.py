@@ -310,10 +310,7 @@ def test_space_below_its_blur_leaves_levels_unresolved(take: Fixture, read: Fixt
         assert (Flag.LEVELS_UNRESOLVED in read(image).flags()) == flagged
 
 
-SHARPENED = "levels that are fitted beside the edge take up the overshoot"
-
-
-@pytest.mark.parametrize("amount", [2.0, pytest.param(1.0, marks=pytest.mark.xfail(reason=SHARPENED, strict=True))])
+@pytest.mark.parametrize("amount", [2.0, 1.0])
 def test_overshoot_beside_the_edges_is_sharpening(take: Fixture, read: Fixture, lines: Fixture, amount: float) -> None:
     image, _ = take(lines(-40.0, 40.0), cnr=200)
     assert Flag.SHARPENED not in read(image).flags()
