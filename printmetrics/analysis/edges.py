@@ -79,11 +79,13 @@ def first_crossing(rows: NDArray[np.float32], levels: NDArray[np.float64]) -> ND
     ndarray of float, shape (M,)
         Column. [px]
     """
-    middle = levels.mean(axis=1).astype(np.float32)
-    above = (rows - middle[:, None]) * np.where(levels[:, 1] > levels[:, 0], np.float32(1), np.float32(-1))[:, None]
-    last = np.argmin(np.cumsum(above, axis=1), axis=1)
+    n = rows.shape[1]
+    above = rows - ((levels[:, 0] + levels[:, 1]) / 2).astype(np.float32)[:, None]
+    above *= np.where(levels[:, 1] > levels[:, 0], np.float32(1), np.float32(-1))[:, None]
+    # The running sum as a product with a triangle of ones: short rows are summed faster so.
+    last = np.argmin(above @ np.triu(np.ones((n, n), np.float32)), axis=1)
     each = np.arange(len(rows))
-    before, after = above[each, last], above[each, np.minimum(last + 1, rows.shape[1] - 1)]
+    before, after = above[each, last], above[each, np.minimum(last + 1, n - 1)]
     rise = after - before
     return np.asarray(last + np.clip(-before / np.where(rise > 0, rise, np.inf), 0.0, 1.0) * (rise > 0))
 
@@ -393,7 +395,7 @@ def _edge(u: NDArray[np.float64], blur: NDArray[np.float64] | float) -> list[NDA
 class _Single(_Fit):
     """One edge a window: all that the normal equations need is looked up by the edge's place in its pixel."""
 
-    scout_steps, full_steps, settled, settled_step = 3, 3, 0.05, 0.1
+    scout_steps, full_steps, settled, settled_step = 3, 3, 0.05, 0.15
 
     def _look(self, nearest: NDArray[np.int32]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         n = self.pixels.shape[1]

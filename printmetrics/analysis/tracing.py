@@ -29,7 +29,8 @@ if TYPE_CHECKING:
 _APART = 8.0  # blurs between two edges from which on each is fitted alone
 _SEARCH_PX, _SEARCH_MOST = 6, 100  # a rough edge is looked for this far, plus 3 blurs, beside its coarse course,
 _AT_END = 0.003  # and further where more than this part of it is found at the ends
-_SMOOTH_EDGE = 0.35  # an edge that strays less from its coarse course, in blurs, is not looked for row by row
+_STRAYS = 5.0  # times the rms stray, and 2 blurs, is how far an edge known to be rough is looked for
+_SMOOTH_EDGE = 0.12  # an edge that strays less from its coarse course, in blurs, is not looked for row by row
 _KNOWN_BLUR = 5.0  # narrower than this many blurs, a line takes its blur from wider ones where there are any
 _PASSES = 8  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
@@ -188,9 +189,11 @@ class _Tracer:
             levels[k] = np.median(self.image[rows, columns], axis=1)
         return levels
 
-    def _search(self, wanted: list[tuple[int, int]], blur: float, every: int = 1) -> dict[tuple[int, int], Any]:
+    def _search(
+        self, wanted: list[tuple[int, int]], blur: float, every: int = 1, reach: dict[tuple[int, int], int] | None = None
+    ) -> dict[tuple[int, int], Any]:
         """Return rows and columns of edges by their first crossing beside the coarse course."""
-        todo = {edge: math.ceil(3 * blur) + _SEARCH_PX for edge in wanted}
+        todo = reach or {edge: math.ceil(3 * blur) + _SEARCH_PX for edge in wanted}
         found = {}
         while todo:
             alike: dict[tuple[int, int], list[tuple[int, int]]] = {}
@@ -250,12 +253,13 @@ class _Tracer:
         """First guess of every edge in every row: its scout's course, or a search where it is rough."""
         lines = len(self.course)
         every = _sparse(self.height)
-        rough = []
+        rough = {}
         for edge, (rows, x) in self._search(list(np.ndindex(lines, 2)), blur, every).items():
             off = x - self.course[edge][rows]
-            if len(off) < _FEWEST_ROWS or float(np.sqrt(np.mean(off * off))) > _SMOOTH_EDGE * blur:
-                rough.append(edge)
-        for edge, (rows, x) in self._search(rough, blur).items():
+            stray = float(np.sqrt(np.mean(off * off))) if len(off) >= _FEWEST_ROWS else blur
+            if stray > _SMOOTH_EDGE * blur:
+                rough[edge] = math.ceil(2 * blur + _STRAYS * stray) + 1
+        for edge, (rows, x) in self._search(list(rough), blur, reach=rough).items():
             self.edges[edge][rows] = x
 
     def _cut(self, own: tuple[tuple[int, int], ...], blur: float, *, known: bool) -> _Cut:
