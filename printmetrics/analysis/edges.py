@@ -268,8 +268,8 @@ class _Fit:
         at = np.arange(len(self.group)) - self.starts[self.group]
         count, size = self.blocks[self.group], self.sizes[self.group]
         self.block = (at * count) // size + first[self.group]
-        place = np.clip((at + 0.5) * (count / size) - 0.5, 0.0, count - 1.0)
-        below = np.minimum(place.astype(np.intp), np.maximum(count - 2, 0))
+        place = (at + 0.5) * (count / size) - 0.5
+        below = np.clip(np.floor(place).astype(np.intp), 0, np.maximum(count - 2, 0))
         self.low = below + first[self.group]
         self.high = np.minimum(below + 1, count - 1) + first[self.group]
         self.part = (place - below).astype(np.float32)

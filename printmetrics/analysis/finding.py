@@ -13,7 +13,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 MAX_TILT_DEG = 30.0
-_BAND_ROWS, _BANDS, _BAND_PIXELS = 8, (3, 32), 150_000  # the direction is taken from this much of a large picture
+_BAND_ROWS, _BANDS, _BAND_PIXELS = 12, (3, 32), 150_000  # the direction is taken from this much of a large picture
 _CLEAR = 0.6  # of all votes for one direction settles it
 _SHRINKS = (1, 4)  # edges so rough that they have no direction up close have one from afar
 _TYPICAL = 4000  # pixels that tell the typical gradient of a band
@@ -24,8 +24,9 @@ _ROWS_USED = 8  # of each block, enough to lift a line out of the noise
 SMOOTH_PX = (1.0, 3.0)  # the second is tried where the first finds nothing: strong blur in strong noise
 _NOISE_PIXELS = 20_000
 _NOISE_SIGMAS = 6.0  # a step counts when it stands out of the noise by this much
-_RELATIVE_STEP = 0.12  # and is at least this part of the picture's strong steps
+_RELATIVE_STEP = 0.25  # and is at least this part of the picture's strong steps
 _APART_BLOCKS, _SLOPE_BINS, _LIKELY = 4, 61, 0.7  # the lines' slope is checked on pieces this far apart
+_END_BLOCKS = (5, 25)
 _FOLLOW = 0.3  # how fast a chain follows a line that wanders
 _COVERED = 0.4  # a line shows its edges over at least this part of its way through the region
 
@@ -135,8 +136,14 @@ def _angle_votes(part: NDArray[np.float32], smooth: float) -> NDArray[np.float64
     part = cv2.GaussianBlur(part, (0, 0), 1.2 * smooth)
     gx = cv2.Sobel(part, cv2.CV_32F, 1, 0)
     gy = cv2.Sobel(part, cv2.CV_32F, 0, 1)
+    # Beyond its border a band is mirrored, and its gradients with it.
+    rim = min(3, (min(part.shape) - 2) // 2)
+    inner = (slice(rim, -rim), slice(rim, -rim)) if rim else (slice(None), slice(None))
+    gx, gy = np.ascontiguousarray(gx[inner]), np.ascontiguousarray(gy[inner])
     power = gx * gx + gy * gy
-    noise = float(np.median(power.ravel()[:: max(1, power.size // _TYPICAL)]))
+    some = power.ravel()[:: max(1, power.size // _TYPICAL)]
+    # Pure noise has 3.1 times its lowest fifth for its median; dense lines leave no more than that without edges.
+    noise = min(float(np.median(some)), 3.1 * float(np.percentile(some, 20)))
     strong = power > 6 * noise
     gx, gy = gx[strong], gy[strong]
     if not gx.size:
@@ -250,10 +257,12 @@ def _pieces(profiles: NDArray[np.float32], scale: float, *, bright: bool) -> lis
     step[:, 1:-1] = smooth[:, 2:] - smooth[:, :-2]
     if not bright:
         step = -step
-    # The noise of the difference of two means, from the differences between neighbouring blocks' pixels.
+    # The noise of a mean, from neighbours across, or from block to block where the lines stand too dense for that.
     every = max(1, profiles.size // _NOISE_PIXELS)
-    rough = profiles[:, 1::every] - profiles[:, :-1:every]
-    noise = 1.4826 * float(np.median(np.abs(rough - np.median(rough)))) / math.sqrt(2) * _step_noise(scale)
+    across = profiles[:, 1::every] - profiles[:, :-1:every]
+    along = profiles[1:, ::every] - profiles[:-1, ::every]
+    spread = [float(np.median(np.abs(d - np.median(d)))) for d in (across, along) if d.size]
+    noise = 1.4826 * min(spread) / math.sqrt(2) * _step_noise(scale)
     size = np.abs(step)
     strong = float(np.percentile(size.max(axis=1), 50))
     least = max(_NOISE_SIGMAS * noise, _RELATIVE_STEP * strong, 1e-6 * float(np.abs(profiles).max()) + 1e-12)
@@ -291,9 +300,9 @@ class _Chain:
         self.rows = [row]
         self.edges = [edges]
 
-    def end(self, row: float, slope: float, *, first: bool) -> NDArray[np.float64]:
-        """Edges expected at a row from the nearest few blocks."""
-        near = slice(None, 5) if first else slice(-5, None)
+    def end(self, row: float, slope: float, blocks: int, *, first: bool) -> NDArray[np.float64]:
+        """Edges expected at a row from the nearest blocks."""
+        near = slice(None, blocks) if first else slice(-blocks, None)
         rows, edges = np.array(self.rows[near]), np.array(self.edges[near])
         return np.asarray(np.median(edges + slope * (row - rows)[:, None], axis=0))
 
@@ -362,10 +371,11 @@ def _join(chains: list[_Chain], slope: float) -> list[CoarseLine]:
             gap = chain.rows[0] - line.rows[-1]
             if gap <= 0:
                 continue
-            own = _course(line, slope)
-            expected = line.end(chain.rows[0], own, first=False)
-            begin = chain.end(chain.rows[0], slope, first=True)
-            distance = float(_distance(expected[None], begin[None], 2.5 + 0.02 * gap)[0, 0])
+            # A neck bends the last few blocks; a line that wanders leaves its long course.
+            ways = [(course, blocks) for course in (_course(line, slope), slope) for blocks in _END_BLOCKS]
+            expected = np.array([line.end(chain.rows[0], course, blocks, first=False) for course, blocks in ways])
+            begin = np.array([chain.end(chain.rows[0], course, blocks, first=True) for course, blocks in ways])
+            distance = float(_distance_of_pairs(expected, begin, 2.5 + 0.02 * gap).min())
             if distance < least:
                 best, least = line, distance
         if best is None:

@@ -36,7 +36,11 @@ _PASSES = 8  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
 _SHAPE_ROWS = 128  # the edge's shape and other typical values are judged on so many rows
 _SURE, _STEADY = 4.0, 4.0  # standard errors by which the edge's shape must stand out of the noise
-_BESIDE, _CORE = (1.3, 2.6), 0.6  # blurs from the edge's middle: where sharpening overshoots, and its core
+_BESIDE, _CORE, _CLEAR_OF = (
+    (1.3, 2.6),
+    0.6,
+    4.0,
+)  # blurs from the edge's middle: where sharpening overshoots, and its core
 _FEWEST_ROWS = 16
 
 
@@ -190,7 +194,11 @@ class _Tracer:
         return levels
 
     def _search(
-        self, wanted: list[tuple[int, int]], blur: float, every: int = 1, reach: dict[tuple[int, int], int] | None = None
+        self,
+        wanted: list[tuple[int, int]],
+        blur: float,
+        every: int = 1,
+        reach: dict[tuple[int, int], int] | None = None,
     ) -> dict[tuple[int, int], Any]:
         """Return rows and columns of edges by their first crossing beside the coarse course."""
         todo = reach or {edge: math.ceil(3 * blur) + _SEARCH_PX for edge in wanted}
@@ -463,6 +471,8 @@ class _Tracer:
             step = levels[j + 1] - levels[j]
             away = np.abs(u[j])
             core, beside = away < _CORE, (away > _BESIDE[0]) & (away < _BESIDE[1])
+            for other in (v for i, v in enumerate(u) if i != j):
+                beside &= np.abs(other) > _CLEAR_OF
             if not core.any() or not beside.any():
                 shapes.append(EdgeShape())
                 continue

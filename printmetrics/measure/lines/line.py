@@ -451,6 +451,9 @@ class _LineReadings:
             u = u_raw if stands_out else math.hypot(float(u_local), doubt * (value - self.mean))
             opened = name == "width_min" and self.opens > 0
             value = 0.0 if opened else seen if stands_out else value
+            if value < 0:  # narrower than nothing: the local width is not resolved
+                self.add(name, None, flags=flags | Flag.OUTSIDE_VALIDITY)
+                continue
             self.add(name, value, noise=0.0 if opened else u, model=0.0 if opened else self.u_shape, flags=flags)
         hit = np.isfinite(line.whole.width) & ~_covered(line.whole.s, line.straight)
         local = np.concatenate([true[np.isfinite(true)], whole[hit]])

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from printmetrics.flags import Flag
 from printmetrics.measure.lines.line import LineFigures, line_figures, line_readings
 from printmetrics.measure.lines.neighbours import neighbour_readings
 from printmetrics.measure.lines.seeing import Seen, see_lines
@@ -82,6 +83,8 @@ def measure_lines(sight: Sight, options: LinesOptions) -> Measured:
         follower = names.get(f"L{int(name[1:]) + 1}")
         if follower is not None:
             result.readings.extend(neighbour_readings(figures[k], figures[follower], seen, sight, options))
+    for name in seen.lost:
+        result.readings.extend(_lost(name, sight))
     result.readings.append(Reading(item="all", quantity="line_count", value=float(seen.count), unit="1"))
     for defect in seen.defects:
         event = _event(defect, seen, figures, sight)
@@ -89,6 +92,15 @@ def measure_lines(sight: Sight, options: LinesOptions) -> Measured:
         outline = seen.to_picture(defect.outline[:, 1], defect.outline[:, 0])
         result.shapes.append(Shape(item=event.item, role=f"event:{event.event}", points_px=outline))
     return result
+
+
+def _lost(name: str, sight: Sight) -> list[Reading]:
+    """Withhold every reading of a line that was found but could not be measured."""
+    return [
+        Reading(item=name, quantity=q.name, value=None, unit=q.unit(sight.scale.unit), flags=Flag.LEVELS_UNRESOLVED)
+        for q in CATALOGUE["lines"].values()
+        if q.name not in _PAIR + _ALL
+    ]
 
 
 def _edge_shapes(seen: Seen, k: int) -> list[Shape]:

@@ -99,6 +99,8 @@ def neighbour_readings(
         reading("space_mean", mean, u_noise=noise, u_sampling=sampling, u_common=common, dof=dof, flags=flags),
         reading("space_min", 0.0, u_noise=0.0, flags=flags)
         if bridges
+        else reading("space_min", None, flags=flags | Flag.OUTSIDE_VALIDITY)
+        if least < 0
         else reading("space_min", least, u_noise=u_least, u_common=math.hypot(least * scale, shape), flags=flags),
         count,
     ]
@@ -109,7 +111,10 @@ def _least_space(one: LineFigures, two: LineFigures, options: LinesOptions, mean
     near, far = _on_common_axis(one.whole, two.whole)
     neck = options.neck_length or NECK_BLURS * float(one.blur[1] + two.blur[0]) / 2
     count = max(1, round(neck / one.straight.step))
-    raw = float(np.nanmin(running_mean(far[0] - near[1], count)))
+    local = running_mean(far[0] - near[1], count)
+    if not np.isfinite(local).any():
+        return -1.0, 0.0
+    raw = float(np.nanmin(local))
     if one.right is None or two.left is None:
         return raw, 0.0
     if one.whole is not one.straight or two.whole is not two.straight:

@@ -45,7 +45,9 @@ class Seen:
     row_step : int
         Rows of the picture in one row of `image`: 2 where pairs of rows were added up.
     names : list of str
-        Name of each line, in order of place.
+        Name of each line traced, in order of place.
+    lost : list of str
+        Names of lines that were found, but whose edges could not be fitted.
     traces : list of Trace
         The lines.
     defects : list of Defect
@@ -64,6 +66,7 @@ class Seen:
     row_step: int
     saturated: NDArray[np.bool_] | None
     names: list[str]
+    lost: list[str]
     traces: list[Trace]
     defects: list[Defect]
     hit: NDArray[np.bool_]
@@ -113,12 +116,18 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
         saturated = saturated if direction.vertical else saturated.T
         if row_step > 1:
             saturated = saturated[: 2 * len(image) : 2] | saturated[1 : 2 * len(image) : 2]
-    traced = [(line, trace) for line, trace in zip(found, trace_lines(image, found), strict=True) if trace is not None]
+    traces = trace_lines(image, found)
     expected = options.count if options.centres is None else len(options.centres)
-    if not traced:
-        raise _nothing(part, options, "no line was found")
-    traces = [trace for _, trace in traced]
-    names = _names(traces, direction, origin, sight, options)
+    middle = len(image) // 2
+    places = [float(np.interp(middle, line.rows, (line.left + line.right) / 2)) for line in found]
+    names = _names(places, direction, origin, sight, options)
+    lost = [name for name, trace in zip(names, traces, strict=True) if trace is None]
+    names = [name for name, trace in zip(names, traces, strict=True) if trace is not None]
+    kept = [trace for trace in traces if trace is not None]
+    if not kept:
+        msg = f"no line can be measured: {len(found)} found, but their edges could not be fitted; look at the picture"
+        raise FeatureError(msg, Flag.LEVELS_UNRESOLVED, count=len(found))
+    traces = kept
     edges, coarse = np.concatenate([t.edges for t in traces]), np.concatenate([t.course for t in traces])
     course = smooth_courses(edges, coarse).reshape(len(traces), 2, -1)
     ink = _ink(image, traces, bright=options.ink == "bright")
@@ -135,7 +144,8 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
         hit=hit,
         spoiled=spoiled,
         ink=ink,
-        count=len(traces),
+        lost=lost,
+        count=len(found),
         expected=expected,
     )
 
@@ -225,18 +235,17 @@ def _nothing(part: NDArray[Any], options: LinesOptions, why: str) -> FeatureErro
 
 
 def _names(
-    traces: list[Trace], direction: Direction, origin: tuple[int, int], sight: Sight, options: LinesOptions
+    places: list[float], direction: Direction, origin: tuple[int, int], sight: Sight, options: LinesOptions
 ) -> list[str]:
     """Name the lines in order, or after the nearest designed centre."""
     if options.centres is None:
-        return [f"L{k + 1}" for k in range(len(traces))]
+        return [f"L{k + 1}" for k in range(len(places))]
     scale, start = (sight.scale.x, origin[0]) if direction.vertical else (sight.scale.y, origin[1])
-    middle = traces[0].course.shape[1] // 2
-    place = np.array([trace.course[:, middle].mean() + start for trace in traces]) * scale
+    place = (np.array(places) + start) * scale
     centres = np.array(options.centres)
     reach = float(np.diff(centres).min()) / 2 if len(centres) > 1 else np.inf
     off = np.abs(place[:, None] - centres)
-    names = [""] * len(traces)
+    names = [""] * len(places)
     for k, j in sorted(np.ndindex(off.shape), key=lambda kj: off[kj]):
         if off[k, j] < reach and not names[k] and f"L{j + 1}" not in names:
             names[k] = f"L{j + 1}"
