@@ -395,7 +395,7 @@ def _edge(u: NDArray[np.float64], blur: NDArray[np.float64] | float) -> list[NDA
 class _Single(_Fit):
     """One edge a window: all that the normal equations need is looked up by the edge's place in its pixel."""
 
-    scout_steps, full_steps, settled, settled_step = 3, 3, 0.05, 0.15
+    scout_steps, full_steps, settled, settled_step = 4, 3, 0.02, 0.1
 
     def _look(self, nearest: NDArray[np.int32]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         n = self.pixels.shape[1]

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import cv2
@@ -24,10 +24,11 @@ _ROWS_USED = 8  # of each block, enough to lift a line out of the noise
 SMOOTH_PX = (1.0, 3.0)  # the second is tried where the first finds nothing: strong blur in strong noise
 _NOISE_PIXELS = 20_000
 _NOISE_SIGMAS = 6.0  # a step counts when it stands out of the noise by this much
-_RELATIVE_STEP = 0.25  # and is at least this part of the picture's strong steps
+_RELATIVE_STEP = 0.12  # and is at least this part of the picture's strong steps
 _APART_BLOCKS, _SLOPE_BINS, _LIKELY = 4, 61, 0.7  # the lines' slope is checked on pieces this far apart
 _END_BLOCKS = (5, 25)
 _FOLLOW = 0.3  # how fast a chain follows a line that wanders
+_HALO_PX, _HALO = 10.0, 4.0  # so close, and so much weaker
 _COVERED = 0.4  # a line shows its edges over at least this part of its way through the region
 
 
@@ -60,11 +61,14 @@ class CoarseLine:
         Middle row of each block in which both edges were seen. [px]
     left, right : ndarray of float, shape (B,)
         Columns of the edges. [px]
+    covered : float
+        Share of its way through the region over which it was seen.
     """
 
     rows: NDArray[np.float64]
     left: NDArray[np.float64]
     right: NDArray[np.float64]
+    covered: float = 1.0
 
 
 def find_direction(image: NDArray[Any], *, vertical: bool | None = None, smooth: float = SMOOTH_PX[0]) -> Direction:
@@ -99,12 +103,12 @@ def find_direction(image: NDArray[Any], *, vertical: bool | None = None, smooth:
             votes, clearest = wide, clear
         if clear > _CLEAR:
             break
-    reach = round(MAX_TILT_DEG) + 2
+    reach = round(MAX_TILT_DEG) + 2 + _SPREAD_DEG
     near = np.arange(-reach, reach + 1)
     strength = {True: votes[near % 180], False: votes[(near + 90) % 180]}
-    best = {key: float(value.max()) for key, value in strength.items()}
+    best = {key: float(value[_SPREAD_DEG:-_SPREAD_DEG].max()) for key, value in strength.items()}
     upright = best[True] >= best[False] if vertical is None else vertical
-    peak = int(np.argmax(strength[upright]))
+    peak = _SPREAD_DEG + int(np.argmax(strength[upright][_SPREAD_DEG:-_SPREAD_DEG]))
     around = np.arange(max(peak - _SPREAD_DEG, 0), min(peak + _SPREAD_DEG + 1, len(near)))
     floor = float(np.median(strength[upright]))
     weight = np.maximum(strength[upright][around] - floor, 0.0)
@@ -223,7 +227,8 @@ def find_lines(image: NDArray[Any], slope: float, *, bright: bool, smooth: float
         pieces = _pieces(profiles, smooth, bright=bright)
     chains = _chains(pieces, centre, slope)
     lines = _join(chains, slope)
-    kept = [line for line in lines if _covered(line, image.shape[1], centre) >= _COVERED]
+    lines = [replace(line, covered=_covered(line, image.shape[1], centre)) for line in lines]
+    kept = [line for line in lines if line.covered >= _COVERED]
     middle = image.shape[0] / 2
     return sorted(kept, key=lambda c: float(np.median((c.left + c.right) / 2 - slope * (c.rows - middle))))
 
@@ -270,6 +275,13 @@ def _pieces(profiles: NDArray[np.float32], scale: float, *, bright: bool) -> lis
     middle = size[:, 1:-1]
     peak[:, 1:-1] = (middle > size[:, :-2]) & (middle >= size[:, 2:]) & (middle > least)
     b, at = np.nonzero(peak)
+    # A weak step close beside a strong one is the strong one's overshoot.
+    amount = size[b, at]
+    close = (b[1:] == b[:-1]) & (np.diff(at) <= _HALO_PX * scale)
+    keep = np.ones(len(b), bool)
+    keep[1:] &= ~(close & (amount[1:] * _HALO < amount[:-1]))
+    keep[:-1] &= ~(close & (amount[:-1] * _HALO < amount[1:]))
+    b, at = b[keep], at[keep]
     if not len(b):
         return [np.empty((0, 2)) for _ in profiles]
     before, here, after = size[b, at - 1], size[b, at], size[b, at + 1]

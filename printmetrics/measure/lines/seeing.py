@@ -25,6 +25,7 @@ if TYPE_CHECKING:
 _SMALLEST_PX = 16
 _TALL_PX, _UPRIGHT = 2000, 0.1  # from so many rows on, and up to this slope, pairs of rows are added up
 _SPOILING = ("open", "bridge", "satellite")  # a neck or a bulge is still the line's width
+_LINE_ALIKE = 0.7  # share of its way over which a line that can't be fitted must have been seen to count
 _RIVAL = 0.7  # edges along the other axis this strong leave the direction open
 _SLACK_ROWS, _SLACK_SD = 512, 4.5  # an edge this many sd off its course is a defect's, not rough
 _UNEVEN = 0.1  # a bare level that varies by this part of the contrast takes a threshold that follows it
@@ -117,6 +118,10 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
         if row_step > 1:
             saturated = saturated[: 2 * len(image) : 2] | saturated[1 : 2 * len(image) : 2]
     traces = trace_lines(image, found)
+    # What shows edges over half its way and can't be fitted is a letter or a drop rather than a line.
+    real = [trace is not None or line.covered > _LINE_ALIKE for line, trace in zip(found, traces, strict=True)]
+    found = [line for line, keep in zip(found, real, strict=True) if keep]
+    traces = [trace for trace, keep in zip(traces, real, strict=True) if keep]
     expected = options.count if options.centres is None else len(options.centres)
     middle = len(image) // 2
     places = [float(np.interp(middle, line.rows, (line.left + line.right) / 2)) for line in found]

@@ -214,7 +214,6 @@ def test_defect_is_one_event_at_its_place_and_spares_the_rest(
         assert abs(width.value - 12.0) < 3 * width.u
 
 
-@pytest.mark.xfail(reason="a line is found in two pieces beside the neck, and neither can be traced", strict=True)
 @pytest.mark.parametrize(("depth", "size"), [(12.0, 20.0), (14.0, 30.0), (16.0, 30.0)])
 def test_deep_neck_does_not_lose_its_line(
     take: Fixture, read: Fixture, lines: Fixture, depth: float, size: float
@@ -318,7 +317,6 @@ def test_overshoot_beside_the_edges_is_sharpening(take: Fixture, read: Fixture, 
     assert Flag.SHARPENED in read(sharp.astype(np.float32)).flags()
 
 
-@pytest.mark.xfail(reason="overshoot of a fifth of the step is taken for a line of its own", strict=True)
 def test_strong_overshoot_is_no_line(take: Fixture, read: Fixture, lines: Fixture) -> None:
     image, _ = take(lines(-40.0, 40.0), cnr=200)
     seen = read(camera.sharpen(image.astype(np.float64), 1.5, 2.5).astype(np.float32))
@@ -345,7 +343,6 @@ def test_piece_shorter_than_20_correlation_lengths_is_short(take: Fixture, read:
 # --- crowded and small
 
 
-CROWDED = "noise is taken from neighbouring pixels, which are all edges where lines fill the picture"
 
 
 # Truth: neighbours down to a space of 4 blurs are promised; here they fill the picture.
@@ -354,8 +351,8 @@ CROWDED = "noise is taken from neighbouring pixels, which are all edges where li
     [
         (8.0, 8.0, 1.0),
         (12.0, 8.0, 2.0),
-        pytest.param(6.0, 4.0, 0.9, marks=pytest.mark.xfail(reason=CROWDED, strict=True)),
-        pytest.param(4.0, 4.0, 0.9, marks=pytest.mark.xfail(reason=CROWDED, strict=True)),
+        (6.0, 4.0, 0.9),
+        (4.0, 4.0, 0.9),
     ],
 )
 def test_grating_that_fills_the_picture(
