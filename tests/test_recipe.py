@@ -207,6 +207,25 @@ def test_all_problems_are_listed_in_the_order_of_the_file(tmp_path: Path) -> Non
     assert lines == [line_of("um_per_px"), line_of("na ="), line_of("neck_length")]
 
 
+def test_a_mistyped_quantity_is_listed_with_the_other_mistakes_of_its_feature(tmp_path: Path) -> None:
+    path = tmp_path / "R.toml"
+    path.write_text(
+        RECIPE.replace("width_mean", "widht_mean").replace("neck_length", "neck").replace("{ upper = 0", "{")
+    )
+    with pytest.raises(RecipeError, match="3 problems") as caught:
+        load_recipe(path)
+    said = str(caught.value)
+    place = f'R.toml, line {line_of("width_mean")}: feature "bus", limits, key "widht_mean": unknown quantity'
+    assert f"{place}; did you mean 'width_mean'?" in said
+    assert 'key "neck": unknown' in said
+    assert 'key "open_count": limits are empty' in said
+
+
+def test_reversed_limits_are_shown_as_far_as_they_are_given(tmp_path: Path) -> None:
+    with pytest.raises(RecipeError, match=r"limits are reversed: lower 2, upper 0; correct it"):
+        load(tmp_path, "open_count = {", "open_count = { lower = 2,")
+
+
 def test_a_mistake_in_toml_is_named_with_line_and_column(tmp_path: Path) -> None:
     with pytest.raises(RecipeError, match=rf"R\.toml, line {line_of('[images]')}, column 7: Expected '='.*correct"):
         load(tmp_path, "[images]", "images")

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Annotated
 
-from pydantic import BaseModel, ConfigDict, Field, FiniteFloat, ValidationInfo, field_validator, model_validator
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field, FiniteFloat, ValidationInfo, model_validator
 
 from printmetrics.quantities import CATALOGUE
 
@@ -22,14 +22,27 @@ class Limits(BaseModel):
 
     @model_validator(mode="after")
     def _ordered(self) -> Limits:
-        given = [v for v in (self.lower, self.target, self.upper) if v is not None]
+        given = {name: value for name, value in self if value is not None}
         if not given:
             msg = "limits are empty; give lower, upper or target"
             raise ValueError(msg)
-        if given != sorted(given):
-            msg = f"limits are reversed: lower {self.lower}, target {self.target}, upper {self.upper}"
+        if list(given.values()) != sorted(given.values()):
+            msg = f"limits are reversed: {', '.join(f'{name} {value:g}' for name, value in given.items())}"
             raise ValueError(msg)
         return self
+
+
+def _known(name: str, info: ValidationInfo) -> str:
+    """Refuse a name that is no quantity of the feature's kind."""
+    known = CATALOGUE.get(info.data.get("kind", ""), {})
+    if known and name not in known:
+        from difflib import get_close_matches  # noqa: PLC0415  (only on the way to an error)
+
+        near = get_close_matches(name, known, n=1)
+        hint = f"did you mean {near[0]!r}?" if near else f"known: {', '.join(known)}"
+        msg = f"unknown quantity; {hint}"
+        raise ValueError(msg)
+    return name
 
 
 class FeatureOptions(BaseModel):
@@ -42,18 +55,6 @@ class FeatureOptions(BaseModel):
     region: tuple[FiniteFloat, FiniteFloat, Positive, Positive] | None = Field(
         None, description="x, y, width, height in um; default: the whole picture."
     )
-    limits: dict[str, Limits] = Field(default_factory=dict, description="Limits by quantity.")
-
-    @field_validator("limits")
-    @classmethod
-    def _limits_known(cls, limits: dict[str, Limits], info: ValidationInfo) -> dict[str, Limits]:
-        known = CATALOGUE.get(info.data.get("kind", ""), {})
-        for name in limits:
-            if known and name not in known:
-                from difflib import get_close_matches  # noqa: PLC0415  (only on the way to an error)
-
-                near = get_close_matches(name, known, n=1)
-                hint = f"; did you mean {near[0]!r}?" if near else f"; known: {', '.join(known)}"
-                msg = f"unknown quantity {name!r} in the limits{hint}"
-                raise ValueError(msg)
-        return limits
+    limits: dict[Annotated[str, AfterValidator(_known)], Limits] = Field(
+        default_factory=dict, description="Limits by quantity."
+    )

@@ -221,7 +221,8 @@ def _text(path: Path, group: list[ErrorDetails], raw: dict[str, Any], schema: di
     elif kind == "missing" and isinstance(first["loc"][-1], str):
         text = f"is missing; add it. It means: {about}"
     else:
-        text = f"{_wanted(group)}. It means: {about}"
+        wanted = _wanted(group)
+        text = f"{wanted}{'' if wanted.endswith('?') else '.'} It means: {about}"
     return text
 
 
