@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -13,8 +14,7 @@ from printmetrics.errors import FeatureError, PictureError
 from printmetrics.flags import Flag
 from printmetrics.inspect import Inspection, failed_inspection, inspect_picture
 from printmetrics.io.pictures import Picture
-from printmetrics.measure.kinds import KINDS, Kind
-from printmetrics.measure.lines import LinesOptions
+from printmetrics.measure.kinds import KINDS
 from printmetrics.measure.readings import Event, Measured, Reading
 from printmetrics.recipe import load_recipe
 
@@ -56,7 +56,7 @@ def _pretend(
     expected: dict[str, tuple[str, ...]],
 ) -> None:
     """Put a kind that gives what the test says in place of the real one."""
-    monkeypatch.setitem(KINDS, "lines", Kind(LinesOptions, measure, lambda _: expected, "line_count"))
+    monkeypatch.setitem(KINDS, "lines", replace(KINDS["lines"], measure=measure, expected_items=lambda _: expected))
 
 
 TWO_LINES = {
@@ -258,7 +258,7 @@ def test_region_is_drawn_where_it_lies(monkeypatch: pytest.MonkeyPatch, recipe: 
     ("machine", "cross", "md", "cd"),
     [("+y", "+x", 20.0, 5.0), ("-y", "-x", -20.0, -5.0), ("+x", "-y", 5.0, -20.0), ("-x", "+y", -5.0, 20.0)],
 )
-def test_event_has_its_place_along_and_across_the_web(  # noqa: PLR0913, PLR0917
+def test_event_has_its_place_along_and_across_the_web(
     monkeypatch: pytest.MonkeyPatch, recipe: Callable[..., Recipe], machine: str, cross: str, md: float, cd: float
 ) -> None:
     event = Event(item="L1", event="neck", x_px=10.0, y_px=40.0, size=3.0, area=2.0)

@@ -24,6 +24,7 @@ from printmetrics.flags import Flag
 from printmetrics.inspect import corrections
 from printmetrics.io.pictures import Found, find_pictures
 from printmetrics.io.tables import EVENTS, IMAGES, MEASUREMENTS, PROFILES, TABLES, Table, TableWriter, describe_table
+from printmetrics.measure.kinds import KINDS
 from printmetrics.recipe import Recipe, load_recipe
 from printmetrics.verdict import DECISION_RULE, GUARD
 
@@ -74,6 +75,43 @@ class Tally:
             self.worst = {**row, "image": image}
 
 
+@dataclass(slots=True)
+class Span:
+    """Readings of one quantity of one feature that have no limits.
+
+    Parameters
+    ----------
+    number : int
+        How many readings.
+    total : float
+        Their sum.
+    smallest, largest : dict or None
+        Their rows, each with its picture.
+    """
+
+    number: int = 0
+    total: float = 0.0
+    smallest: Row | None = None
+    largest: Row | None = None
+
+    def add(self, row: Row, image: str) -> None:
+        """Count a reading.
+
+        Parameters
+        ----------
+        row : dict
+            Its row.
+        image : str
+            Its picture's name.
+        """
+        self.number += 1
+        self.total += row["value"]
+        if self.smallest is None or row["value"] < self.smallest["value"]:
+            self.smallest = {**row, "image": image}
+        if self.largest is None or row["value"] > self.largest["value"]:
+            self.largest = {**row, "image": image}
+
+
 def _room(row: Row) -> float:
     """Return how far a reading is inside its limits."""
     lower, upper = row["lower"], row["upper"]
@@ -120,6 +158,8 @@ class RunSummary:
         By picture, why it, or a feature in it, could not be measured.
     tallies : dict
         Verdicts by feature and quantity.
+    spans : dict
+        Likewise, of the main quantities without limits, what was read.
     """
 
     out: Path
@@ -129,6 +169,7 @@ class RunSummary:
     drawn: int = 0
     reasons: dict[str, str] = field(default_factory=dict)
     tallies: dict[tuple[str, str], Tally] = field(default_factory=dict)
+    spans: dict[tuple[str, str], Span] = field(default_factory=dict)
 
     @property
     def all_conform(self) -> bool:
@@ -195,7 +236,8 @@ def measure_folder(
     workers : int, optional
         Number of processes. With more than one, a script must call this under ``if __name__ == "__main__":``.
     drawn : {"flagged", "all", "none"}, optional
-        Which marked-up pictures to write; flagged: those with an event, a flag, or a verdict that is not conforming.
+        Which marked-up pictures to write; flagged: those with an event, a flag, or a verdict that is not
+        conforming, and all where the recipe limits nothing but the number of items.
     progress : callable, optional
         Called after each picture.
 
@@ -212,6 +254,8 @@ def measure_folder(
         When interrupted; its message says what was finished.
     """
     summary = RunSummary(out=plan.out, found=len(plan.pictures))
+    if drawn == "flagged" and not plan.recipe.judges_items:
+        drawn = "all"
     try:
         _prepare_out(plan)
         with _Record(plan, summary) as record:
@@ -336,8 +380,11 @@ class _Record:
         if found.reason:
             summary.reasons[outcome.image] = found.reason
         for row in found.rows:
+            what = row["feature"], row["quantity"]
             if row["verdict"]:
-                summary.tallies.setdefault((row["feature"], row["quantity"]), Tally()).add(row, outcome.image)
+                summary.tallies.setdefault(what, Tally()).add(row, outcome.image)
+            elif row["value"] is not None and row["quantity"] in KINDS[row["kind"]].main:
+                summary.spans.setdefault(what, Span()).add(row, outcome.image)
 
     def _write(self, table: Table, rows: Iterable[Row]) -> None:
         self._writers[table].write(rows)

@@ -40,7 +40,8 @@ SIGNS = {"ok": "blue", "?": "yellow", "X": "bold magenta"}
 @click.option("--strict", is_flag=True, help="Exit with 3 when a limited reading is not conforming.")
 @click.option(
     "--pictures", type=click.Choice(["flagged", "all", "none"]), default="flagged", show_default=True,
-    help="Which marked-up pictures to draw; flagged: those a person should look at.",
+    help="Which marked-up pictures to draw; flagged: those a person should look at, "
+    "or all if the recipe limits nothing but the number of lines.",
 )  # fmt: skip
 @click.option("--dry-run", is_flag=True, help="List what would be measured; write nothing.")
 @click.option("--quiet", is_flag=True, help="No progress, no summary; errors only.")
@@ -138,15 +139,36 @@ def _print_summary(summary: RunSummary) -> None:
                 *(Text(str(n), style if n else "dim") for n, style in zip(counts, SIGNS.values(), strict=True)),
                 value_words(worst["value"], worst["expanded_u"], worst["unit"]) if worst else "withheld",
                 _limits(worst) if worst else "",
-                Text(f"{worst['item']} in {_printable(worst['image'])}" if worst else ""),
+                Text(_where(worst) if worst else ""),
             )
         console.print(table)
         click.echo("ok conforming, ? undecided, X nonconforming; worst: farthest beyond a limit, or nearest to it\n")
+    if summary.spans:
+        table = Table(box=None, pad_edge=False, header_style="bold")
+        for heading in ("feature", "quantity", "readings", "mean"):
+            table.add_column(heading, justify="right" if heading == "readings" else "left", no_wrap=True)
+        for heading in ("smallest", "largest"):
+            table.add_column(heading, overflow="fold")
+        for (feature, quantity), span in summary.spans.items():
+            ends = [end for end in (span.smallest, span.largest) if end is not None]
+            table.add_row(
+                Text(_printable(feature)),
+                quantity,
+                str(span.number),
+                value_words(span.total / span.number, None, ends[0]["unit"]),
+                *(Text(f"{value_words(end['value'], end['expanded_u'], end['unit'])}, {_where(end)}") for end in ends),
+            )
+        console.print(table)
+        click.echo("these have no limits, so they are not judged\n")
     drawn = f"{summary.drawn} marked-up pictures in {summary.out / 'pictures'}; " if summary.drawn else ""
     click.echo(
         f"{summary.measured} of {summary.found} pictures measured, {summary.failed} failed; "
         f"{drawn}tables in {summary.out}"
     )
+
+
+def _where(row: dict[str, Any]) -> str:
+    return f"{row['item']} in {_printable(row['image'])}"
 
 
 def _limits(row: dict[str, Any]) -> str:

@@ -29,14 +29,23 @@ class Kind:
         Names the items that the options promise, for rows that must not be missing.
     count : str
         The quantity that counts its items.
+    main : tuple of str
+        The quantities that a person looks at first, for a summary where there are no limits.
     """
 
     options: type[FeatureOptions]
     measure: Callable[[Sight, Any], Measured]
     expected_items: Callable[[Any], dict[str, tuple[str, ...]]]
     count: str
+    main: tuple[str, ...]
 
 
 KINDS: dict[str, Kind] = {
-    "lines": Kind(lines.LinesOptions, lines.measure_lines, lines.expected_items, "line_count"),
+    "lines": Kind(
+        options=lines.LinesOptions,
+        measure=lines.measure_lines,
+        expected_items=lines.expected_items,
+        count="line_count",
+        main=("width_mean", "width_min", "lwr_3sigma", "space_min", "line_count"),
+    ),
 }

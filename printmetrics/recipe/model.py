@@ -366,6 +366,16 @@ class Recipe(_Section):
                 notes.append(f"limits in um get no verdict while the scale is unknown: {', '.join(ignored)}")
         return tuple(notes)
 
+    @property
+    def judges_items(self) -> bool:
+        """Whether anything gets a verdict beside the number of items, which is limited wherever it is expected."""
+        return any(
+            self.limits_for(feature, quantity)
+            for feature in self.features
+            for quantity in feature.limits
+            if quantity != KINDS[feature.kind].count
+        )
+
     def limits_for(self, feature: FeatureOptions, quantity: str) -> Limits | None:
         """Return the limits that a quantity is judged by.
 

@@ -5,10 +5,12 @@ from __future__ import annotations
 import csv
 import json
 import os
+import re
 import signal
 import subprocess
 import sys
 import time
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -20,7 +22,7 @@ from click.testing import CliRunner, Result
 
 from printmetrics.cli import main
 from printmetrics.io.tables import read_table
-from printmetrics.measure.kinds import KINDS, Kind
+from printmetrics.measure.kinds import KINDS
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -273,6 +275,32 @@ def test_dry_run_lists_pictures_and_writes_nothing(folder: Path) -> None:
     assert sorted(folder.parent.rglob("*")) == before
 
 
+def _without_limits(folder: Path) -> None:
+    recipe = folder.parent / "recipe.toml"
+    recipe.write_text(recipe.read_text().partition("[feature.limits]")[0])
+
+
+def test_recipe_without_limits_shows_what_was_read_and_draws_all(folder: Path) -> None:
+    _without_limits(folder)
+    result = _measure(folder)
+    assert result.exit_code == 0
+    widths = [row for row in _table(folder.parent / "out", "measurements") if row["quantity"] == "width_mean"]
+    widths.sort(key=lambda row: float(row["value"]))
+    (shown,) = (line for line in result.stdout.splitlines() if line.startswith("bus      width_mean"))
+    mean = np.mean([float(row["value"]) for row in widths])
+    assert shown.split()[2:5] == ["4", f"{mean:.4g}", "um"]
+    places = re.findall(r"([\d.]+) \+/- [\d.]+ um, (L\d) in (\w\.png)", shown)
+    ends = [widths[0], widths[-1]]
+    assert [place[1:] for place in places] == [(row["item"], row["image"]) for row in ends]
+    np.testing.assert_allclose([float(p[0]) for p in places], [float(row["value"]) for row in ends], atol=5e-3)
+    assert "not judged" in result.stdout
+    assert _drawings(folder) == ["a.png.png", "b.png.png"]
+
+
+def test_quantity_with_limits_is_not_told_twice(folder: Path) -> None:
+    assert len(re.findall(r"^bus +width_mean ", _measure(folder).stdout, re.MULTILINE)) == 1
+
+
 def test_quiet_run_prints_nothing(folder: Path) -> None:
     assert _measure(folder, "--quiet").output == ""
 
@@ -392,7 +420,7 @@ def test_bug_fails_its_picture_and_leaves_its_traceback_in_the_log(
             raise IndexError(msg)
         return kind.measure(sight, options)
 
-    monkeypatch.setitem(KINDS, "lines", Kind(kind.options, measure, kind.expected_items, kind.count))
+    monkeypatch.setitem(KINDS, "lines", replace(kind, measure=measure))
     result = _measure(folder)
     assert result.exit_code == 1
     first, second = _table(folder.parent / "out", "images")
