@@ -15,7 +15,7 @@ from printmetrics.flags import Flag
 from printmetrics.inspect import Inspection, failed_inspection, inspect_picture
 from printmetrics.io.pictures import Picture
 from printmetrics.measure.kinds import KINDS
-from printmetrics.measure.readings import Event, Measured, Reading
+from printmetrics.measure.readings import Event, Measured, Reading, Shape
 from printmetrics.recipe import load_recipe
 
 if TYPE_CHECKING:
@@ -189,6 +189,71 @@ def test_withheld_reading_with_a_limit_is_undecided_and_not_doubled(
     _pretend(monkeypatch, _gives(withheld), {"L1": ("width_mean",)})
     (row,) = inspect_picture(_picture(), recipe(limits="width_mean = { upper = 22.0 }")).rows
     assert (row["value"], row["u"], row["expanded_u"], row["verdict"]) == (None, None, None, "undecided")
+
+
+CENTRES = "centres = [10.0, 25.0, 40.0]\nregion = [5.0, 10.0, 40.0, 20.0]"
+
+
+def _edges_of(*lines: tuple[str, float], slope: float = 0.0) -> Callable[[Sight, FeatureOptions], Measured]:
+    """Pretend that lines were found whose edges run down the picture through x at row 40. [px]."""
+    rows = np.arange(20.0, 61.0)
+    shapes = [
+        Shape(item=item, role="edge", points_px=np.stack([x + slope * (rows - 40.0), rows], axis=1))
+        for item, x in lines
+    ]
+    readings = [_reading(item, "width_mean") for item, _ in lines]
+    return lambda _sight, _options: Measured(readings=readings, shapes=shapes)
+
+
+# Truth by hand: at 0.5 um per px the middle of the region is row 40, and its ends are rows 20 and 60.
+def test_missing_line_runs_through_its_centre_beside_the_others(
+    monkeypatch: pytest.MonkeyPatch, recipe: Callable[..., Recipe]
+) -> None:
+    _pretend(monkeypatch, _edges_of(("L1", 20.0), ("L3", 80.0), slope=0.1), {})
+    inspection = inspect_picture(_picture(), recipe(feature=CENTRES))
+    (line,) = (shape for _, shape in inspection.shapes if shape.role == "missing")
+    assert line.item == "L2"
+    np.testing.assert_allclose(line.points_px, [(48.0, 20.0), (52.0, 60.0)])
+
+
+@pytest.mark.parametrize(
+    ("direction", "ends"),
+    [
+        ('"vertical"', [(20.0, 20.0), (20.0, 60.0)]),
+        ('"horizontal"', [(10.0, 20.0), (90.0, 20.0)]),
+        ("90", [(20.0, 20.0), (20.0, 60.0)]),
+        ("-10", [(10.0, 20.0 + 40.0 * math.tan(math.radians(10))), (90.0, 20.0 - 40.0 * math.tan(math.radians(10)))]),
+    ],
+)
+def test_where_no_line_is_found_the_recipe_tells_how_they_run(
+    monkeypatch: pytest.MonkeyPatch, recipe: Callable[..., Recipe], direction: str, ends: list[tuple[float, float]]
+) -> None:
+    _pretend(monkeypatch, _raises(FeatureError("no line", Flag.COUNT_DIFFERS, count=0)), {})
+    inspection = inspect_picture(_picture(), recipe(feature=f"{CENTRES}\ndirection = {direction}"))
+    missing = {shape.item: shape.points_px for _, shape in inspection.shapes if shape.role == "missing"}
+    assert list(missing) == ["L1", "L2", "L3"]
+    np.testing.assert_allclose(missing["L1"], ends, atol=1e-9)
+
+
+@pytest.mark.parametrize(
+    ("measure", "feature"),
+    [
+        (_raises(FeatureError("no line", Flag.COUNT_DIFFERS, count=0)), CENTRES),  # which way they run is unknown
+        (_raises(FeatureError("too dark", Flag.LEVELS_UNRESOLVED)), f'{CENTRES}\ndirection = "vertical"'),
+        (_edges_of(("L1", 20.0)), 'count = 3\ndirection = "vertical"'),
+        (_edges_of(("L1", 20.0), ("L2", 50.0), ("L3", 80.0)), CENTRES),
+    ],
+    ids=["direction unknown", "not known to be missing", "place unknown", "all found"],
+)
+def test_no_line_is_called_missing_where_that_or_its_place_is_unknown(
+    monkeypatch: pytest.MonkeyPatch,
+    recipe: Callable[..., Recipe],
+    measure: Callable[[Sight, FeatureOptions], Measured],
+    feature: str,
+) -> None:
+    _pretend(monkeypatch, measure, {})
+    inspection = inspect_picture(_picture(), recipe(feature=feature))
+    assert "missing" not in {shape.role for _, shape in inspection.shapes}
 
 
 def test_one_failed_feature_of_two_leaves_the_picture_measured(

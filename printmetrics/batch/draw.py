@@ -173,6 +173,13 @@ def _polyline(canvas: NDArray[np.uint8], points: NDArray[np.float64], colour: Co
     cv2.polylines(canvas, fixed, False, colour, thick, cv2.LINE_AA, SHIFT)  # noqa: FBT003  (OpenCV's is positional)
 
 
+def _dashed(ends: NDArray[np.float64], dash: float) -> NDArray[np.float64]:
+    """Return a straight line in dashes of about a length. [px]."""
+    number = max(1, round(float(np.hypot(*(ends[1] - ends[0]))) / (2 * dash)))
+    places = ends[0] + np.linspace(0, 1, 2 * number)[:, None] * (ends[1] - ends[0])
+    return np.insert(places, np.arange(2, 2 * number, 2), np.nan, axis=0)
+
+
 def _worst(rows: Sequence[dict[str, Any]]) -> str:
     """Return the worst verdict among rows."""
     verdicts = {row["verdict"] for row in rows}
@@ -189,13 +196,15 @@ def _by_item(inspection: Inspection) -> dict[tuple[str, str], list[dict[str, Any
 def _draw_shapes(canvas: NDArray[np.uint8], inspection: Inspection, place: _Place, text: float) -> None:
     items = _by_item(inspection)
     thick = 2 if max(canvas.shape) > 1500 else 1  # noqa: PLR2004  (a hair line vanishes on a large drawing)
-    for role in ("region", "edge", "left_out", "event"):
+    for role in ("region", "edge", "left_out", "missing", "event"):
         for feature, shape in inspection.shapes:
             if shape.role.partition(":")[0] != role:
                 continue
             verdict_colour = STYLE[_worst(items.get((feature, shape.item), []))][1]
-            colour = {"region": REGION, "edge": verdict_colour, "left_out": LEFT_OUT, "event": WHITE}[role]
+            colour = {"region": REGION, "left_out": LEFT_OUT, "event": WHITE}.get(role, verdict_colour)
             points = place(shape.points_px)
+            if role == "missing":
+                points = _dashed(points, 12 * text / 0.42)
             if role == "event":
                 _polyline(canvas, points, (0, 0, 0), thick + 2)
             _polyline(canvas, points, colour, thick)
@@ -246,10 +255,12 @@ def _labels(inspection: Inspection, zoom: float, text: float) -> list[_Label]:
     edges: dict[tuple[str, str], list[NDArray[np.float64]]] = {}
     for feature, shape in inspection.shapes:
         good = shape.points_px[np.isfinite(shape.points_px).all(axis=1)]
-        if shape.role == "edge" and len(good):
+        if shape.role in {"edge", "missing"} and len(good):
             edges.setdefault((feature, shape.item), []).append(good)
+    missing = {(feature, shape.item) for feature, shape in inspection.shapes if shape.role == "missing"}
+    words = {key: f"{key[1]} missing" if key in missing else _label_words(key[1], items.get(key, [])) for key in edges}
     labels = []
-    room = max((_extent(_label_words(key, items), text)[0] for key in edges), default=0)
+    room = max((_extent(label, text)[0] for label in words.values()), default=0)
     for key, lines in edges.items():
         verdict = _worst(items.get(key, []))
         x, y = np.mean([line[0] for line in lines], axis=0)
@@ -261,7 +272,7 @@ def _labels(inspection: Inspection, zoom: float, text: float) -> list[_Label]:
         if (y if upright else x) < room:  # the margin is near, and there the label hides nothing
             x, y = (x, 0.0) if upright else (0.0, y)
         rank, colour = WORST_FIRST.index(verdict), STYLE[verdict][1]
-        labels.append(_Label(_label_words(key, items), colour, rank, upright, turned=False, x=x, y=y))
+        labels.append(_Label(words[key], colour, rank, upright, turned=False, x=x, y=y))
     boxes = [_label_box(label, text) for label in labels]
     if any(_overlap(a, b) for number, a in enumerate(boxes) for b in boxes[:number]):
         labels = [replace(label, turned=label.upright) for label in labels]
@@ -273,12 +284,21 @@ def _labels(inspection: Inspection, zoom: float, text: float) -> list[_Label]:
     return kept
 
 
-def _label_words(key: tuple[str, str], items: dict[tuple[str, str], list[dict[str, Any]]]) -> str:
-    """Return a line's name, mean width and sign of the worst verdict."""
-    rows = items.get(key, [])
-    widths = [row for row in rows if row["quantity"] == "width_mean" and row["value"] is not None]
-    width = "".join(value_words(row["value"], row["expanded_u"], row["unit"]) for row in widths)
-    return " ".join(part for part in (key[1], width, STYLE[_worst(rows)][0]) if part)
+def _label_words(item: str, rows: list[dict[str, Any]]) -> str:
+    """Return a line's name, its mean width with its sign, and what else is worse than that."""
+    words = item
+    judged = WORST_FIRST.index("conforming")
+    for row in rows:
+        if row["quantity"] == "width_mean" and row["value"] is not None:
+            width = value_words(row["value"], row["expanded_u"], row["unit"])
+            words = f"{words} {width} {STYLE[row['verdict']][0]}".rstrip()
+            judged = min(judged, WORST_FIRST.index(row["verdict"]))
+    # Of those equally bad a count says most in a word: open_count.
+    bad = [(WORST_FIRST.index(row["verdict"]), row["unit"] != "1", row["quantity"]) for row in rows]
+    rank, _, quantity = min(bad, default=(judged, False, ""))
+    if rank < judged:
+        words += f"{',' if words != item else ''} {STYLE[WORST_FIRST[rank]][0]} {quantity}"
+    return words
 
 
 def value_words(value: float, expanded_u: float | None, unit: str) -> str:

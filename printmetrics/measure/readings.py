@@ -116,7 +116,9 @@ class Shape:
     item : str
         The item it belongs to.
     role : str
-        ``edge``: a measured edge; ``left_out``: edge points not used; ``event``: outline of an event.
+        ``edge``: a measured edge; ``left_out``: edge points not used; ``missing``: from where to where an expected
+        line, which was not found, should run; ``region``: where was looked; ``event:neck`` and its like: outline of
+        an event.
     points_px : ndarray of float, shape (n, 2)
         x and y in the whole picture; NaN rows break the line. [px]
     """

@@ -54,6 +54,44 @@ def test_verdict_shows_by_colour_and_by_sign(verdict: str) -> None:
     assert label.colour == colour
 
 
+# Verdict of the width, and of what else was read of the line; what the label says after the name.
+WORSE = {
+    "open at width": ("conforming", {"width_min": "nonconforming", "open_count": "nonconforming"},
+                      " 20.000 +/- 0.050 um ok, X open_count"),
+    "too wide and rough": ("nonconforming", {"lwr_3sigma": "undecided"}, " 20.000 +/- 0.050 um X"),
+    "width without limits": ("", {"lwr_3sigma": "undecided"}, " 20.000 +/- 0.050 um, ? lwr_3sigma"),
+    "nothing worse": ("", {"lwr_3sigma": "conforming"}, " 20.000 +/- 0.050 um"),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("what", WORSE)
+def test_sign_beside_the_width_is_its_own_and_what_is_worse_is_named(what: str) -> None:
+    verdict, others, words = WORSE[what]
+    rows = [_row("L1", verdict)]
+    rows += [_row("L1", v, quantity=q, unit="1" if q == "open_count" else "um") for q, v in others.items()]
+    (label,) = _labels(Inspection(rows=rows, shapes=[_edge("L1", 50.0, 100)], scale=SCALE), 1.0, 0.4)
+    assert label.text == f"L1{words}"
+
+
+def test_withheld_width_is_named_with_its_sign() -> None:
+    rows = [_row("L1", "undecided", value=None, expanded_u=None)]
+    (label,) = _labels(Inspection(rows=rows, shapes=[_edge("L1", 50.0, 100)], scale=SCALE), 1.0, 0.4)
+    assert label.text == "L1 ? width_mean"
+
+
+def test_missing_line_is_dashed_and_named() -> None:
+    ends = Shape(item="L2", role="missing", points_px=np.array([(150.0, 20.0), (150.0, 280.0)]))
+    rows = [_row("L2", "undecided", value=None)]
+    inspection = Inspection(rows=rows, shapes=[("bus", ends)], scale=SCALE)
+    (label,) = _labels(inspection, 3.0, 0.4)
+    assert label.text == "L2 missing"
+    drawing = draw_picture(np.zeros((300, 300), np.uint8), inspection, "x")
+    lit = _coloured(drawing, STYLE["undecided"][1])[-880:-40, :].any(axis=1)  # without the header and the footer
+    dashes = np.count_nonzero(np.diff(lit.astype(int)) == 1)
+    assert 20 < dashes < 50
+    assert 0.4 < lit[100:700].mean() < 0.65
+
+
 def test_verdict_colours_differ_in_lightness_too() -> None:
     colours = np.array([[STYLE[verdict][1] for verdict in ("nonconforming", "undecided", "conforming")]], np.uint8)
     light = np.sort(cv2.cvtColor(colours, cv2.COLOR_BGR2LAB)[0, :, 0].astype(int))
@@ -138,3 +176,7 @@ def test_value_is_rounded_to_its_uncertainty() -> None:
     # Two digits of the uncertainty: JCGM 100:2008, 7.2.6.
     assert value_words(20.12345, 0.0123, "um") == "20.123 +/- 0.012 um"
     assert value_words(3.0, None, "1") == "3"
+
+
+def test_value_known_exactly_stands_alone() -> None:
+    assert value_words(0.0, 0.0, "um") == "0 um"
