@@ -8,7 +8,7 @@ class Flag(_Flag):
     """A property of one reading that its reader must know.
 
     Names are written to tables in lower case, joined by ``;``. The criterion of each
-    flag stands in `CRITERIA`.
+    flag stands in README's table of flags.
     """
 
     NONE = 0
