@@ -93,7 +93,9 @@ recipe.toml       what to measure, and the limits
 truth.csv         what the lines measure, exactly: "process" is what the endless line has, of which the picture
                   shows a piece; "piece" what the piece in the recipe's region has. Mean widths and
                   spaces, lwr and ler leave the defects out; extremes and the harmonic width count them
-truth_events.csv  where the defects are
+truth_events.csv  where the defects are. The size of a neck is its length at half depth; events.csv gives the whole
+                  length over which the edge departs, which is more. A free drop stands under the line it was
+                  put beside; events.csv names both lines it lies between
 R07_*             the pictures: roll, metres along it, lane
 
 What was put in:
@@ -279,7 +281,7 @@ def _line_rows(shot: _Shot, truth: Truth) -> Iterator[tuple[object, ...]]:
     for number, (one, two) in enumerate(pairwise(items)):
         if int(two[1:]) - int(one[1:]) == 1:
             between = f"{one}..{two}"
-            mean, smallest = truth.spaces(number, neck)
+            mean, smallest = truth.spaces(number, neck, piece)
             bridges = sum(d.item == between and d.event == "bridge" for d in truth.defects)
             yield between, "space_mean", "piece", mean * UM_PER_PX, "um"
             yield between, "space_min", "piece", smallest * UM_PER_PX, "um"

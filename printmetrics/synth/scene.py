@@ -310,7 +310,9 @@ class Truth:
         line = self.lines[number]
         return self.scene.to_picture(line.along, line.left if side == "left" else line.right)
 
-    def spaces(self, number: int, neck_length: float = 0.0) -> tuple[float, float]:
+    def spaces(
+        self, number: int, neck_length: float = 0.0, piece: tuple[float, float] | None = None
+    ) -> tuple[float, float]:
         """Return mean and smallest space between a line and the next.
 
         Parameters
@@ -319,6 +321,8 @@ class Truth:
             Number of the first of the two lines, from 0.
         neck_length : float, optional
             Length over which local space is averaged for the smallest. [px]
+        piece : (float, float), optional
+            From where to where along the lines; default: where both are inside the picture. [px]
 
         Returns
         -------
@@ -326,10 +330,11 @@ class Truth:
             Mean without defects, smallest with them, 0 at a bridge. Satellites do not count. [px]
         """
         one, two = self.lines[number : number + 2]
-        first, last = max(one.inside[0], two.inside[0]), min(one.inside[1], two.inside[1])
+        first, last = piece or (max(one.inside[0], two.inside[0]), min(one.inside[1], two.inside[1]))
         ones, twos = (((line.along >= first) & (line.along <= last)) for line in (one, two))
         mean = float(two.clean_left[twos].mean() - one.clean_right[ones].mean())
-        if any(defect.event == "bridge" and defect.line == number for defect in self.scene.defects):
+        bridges = [defect.at for defect in self.scene.defects if defect.event == "bridge" and defect.line == number]
+        if any(first <= at <= last for at in bridges):
             return mean, 0.0
         return mean, float(_running_mean(two.left[twos] - one.right[ones], neck_length).min())
 

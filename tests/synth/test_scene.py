@@ -1,5 +1,7 @@
 """Scenes and their truth."""
 
+from functools import partial
+
 import numpy as np
 import pytest
 
@@ -150,6 +152,22 @@ def test_bridge_closes_the_space_and_leaves_the_widths() -> None:
     assert truth.spaces(0) == (40.0, 0.0)
     assert truth.spaces(1) == (40.0, 40.0)
     assert truth.lines[0].statistics().width_max == 20.0
+
+
+def test_space_of_a_piece_is_that_of_the_edges_in_it() -> None:
+    edge = partial(np.interp, xp=[-100.0, 100.0], fp=[-10.0, 10.0])  # the second line's left edge leaves the first
+    lines = (Line(offset=-30.0, width=20.0), Line(offset=30.0, width=20.0, left_departure=edge))
+    truth = shown(Scene(shape=(240, 160), lines=lines))[1]
+    mean, smallest = truth.spaces(0, piece=(-60.0, 20.0))
+    assert mean == pytest.approx(40.0 - 2.0, abs=0.01)
+    assert smallest == pytest.approx(40.0 - 6.0, abs=0.01)
+
+
+def test_bridge_beyond_a_piece_leaves_its_space_open() -> None:
+    at = DEFECTS["bridge"].at
+    truth = shown(lines_scene(2, defects=(DEFECTS["bridge"],)))[1]
+    assert truth.spaces(0, piece=(at - 20.0, at + 20.0)) == (40.0, 0.0)
+    assert truth.spaces(0, piece=(at + 30.0, at + 60.0)) == (40.0, 40.0)
 
 
 def test_drop_that_reaches_another_line_is_refused() -> None:
