@@ -367,6 +367,8 @@ class _Fit:
             for a in range(self.k + 2):
                 gain[i, a] = np.add.reduceat(self.gain[i][a] * used, self.bounds) / total[self.block_group]
         carried = self.shared_fit.carried(gain)
+        each = range(self.k)
+        carried[:, each, each] = np.maximum(carried[:, each, each], 0.0)  # rounding, where levels hardly show
         u = np.sqrt([self._per_window(self.inverse[i][i], keep) for i in range(self.k)]) * self.noise
         fits = []
         for g in range(len(self.sizes)):

@@ -70,6 +70,8 @@ class LineFigures:
         Gaussian sigma of either edge, across the line, and its standard uncertainty from pixel noise.
     u_shape : ndarray of float, shape (2,)
         Standard uncertainty of either edge's mean position because its shape isn't the model's.
+    count : int
+        Places along the line at which both edges were measured.
     level_shift : float
         By how much the width at the recipe's edge level exceeds that at mid-level.
     flags : Flag
@@ -89,6 +91,7 @@ class LineFigures:
     blur: NDArray[np.float64]
     u_blur: NDArray[np.float64]
     u_shape: NDArray[np.float64]
+    count: int
     level_shift: float
     flags: Flag
     width: Process | None = None
@@ -99,7 +102,7 @@ class LineFigures:
     @property
     def length(self) -> float:
         """Length measured."""
-        return float(np.isfinite(self.straight.width).sum()) * self.straight.step
+        return self.count * self.straight.step
 
     @property
     def centre_variance(self) -> float:
@@ -209,6 +212,7 @@ def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFi
         blur=blur,
         u_blur=trace.u_blur * normal,
         u_shape=np.array([_u_shape(shape, b) for shape, b in zip(trace.shapes, trace.blur, strict=True)]) * normal,
+        count=int(np.isfinite(straight.width).sum()),
         level_shift=level_shift(blur, options.edge_level, bright=options.ink == "bright"),
         flags=_flags(seen, k, sight, blur, options),
     )
@@ -330,9 +334,8 @@ class _LineReadings:
     def __init__(self, line: LineFigures, seen: Seen, sight: Sight, options: LinesOptions) -> None:
         self.line, self.seen, self.scale, self.options = line, seen, sight.scale, options
         self.width = line.straight.width
-        known = np.isfinite(self.width)
-        self.count = int(known.sum())
-        self.mid_mean = float(self.width[known].mean())
+        self.count = line.count
+        self.mid_mean = float(self.width[np.isfinite(self.width)].mean())
         self.u_shape = float(line.u_shape.sum())  # both edges have their shape from the same ink, light and lens
         self.mean = self.mid_mean + line.level_shift
         self.readings: list[Reading] = []
@@ -578,6 +581,7 @@ def _sd(values: NDArray[np.float64], *, line_removed: bool) -> float:
 def running_mean(values: NDArray[np.float64], count: int) -> NDArray[np.float64]:
     """Mean over `count` neighbours, where at least half of them are known."""
     good = np.isfinite(values)
+    count = min(count, len(values))
     total = np.convolve(np.where(good, values, 0.0), np.ones(count), mode="same")
     known = np.convolve(good.astype(float), np.ones(count), mode="same")
     full = known >= (count / 2 if count < len(values) else 1)

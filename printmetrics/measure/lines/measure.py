@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from printmetrics.errors import FeatureError
 from printmetrics.flags import Flag
 from printmetrics.measure.lines.line import LineFigures, line_figures, line_readings
 from printmetrics.measure.lines.neighbours import neighbour_readings
@@ -21,6 +22,7 @@ if TYPE_CHECKING:
 
 _PAIR = ("pitch", "space_mean", "space_min", "bridge_count")
 _ALL = ("line_count",)
+_FEWEST_PLACES = 8
 
 
 def expected_items(options: LinesOptions) -> dict[str, tuple[str, ...]]:
@@ -75,15 +77,18 @@ def measure_lines(sight: Sight, options: LinesOptions) -> Measured:
     seen = see_lines(sight, options)
     result = Measured()
     figures = line_figures(seen, sight, options)
-    for k, line in enumerate(figures):
-        result.readings.extend(line_readings(line, seen, sight, options))
+    names = {name: k for k, name in enumerate(seen.names) if figures[k].count >= _FEWEST_PLACES}
+    if not names:
+        msg = f"{seen.count} lines were found, but none has both edges in {_FEWEST_PLACES} places; look at the picture"
+        raise FeatureError(msg, Flag.LEVELS_UNRESOLVED, count=seen.count)
+    for k in names.values():
+        result.readings.extend(line_readings(figures[k], seen, sight, options))
         result.shapes.extend(_edge_shapes(seen, k))
-    names = {name: k for k, name in enumerate(seen.names)}
     for name, k in names.items():
         follower = names.get(f"L{int(name[1:]) + 1}")
         if follower is not None:
             result.readings.extend(neighbour_readings(figures[k], figures[follower], seen, sight, options))
-    for name in seen.lost:
+    for name in [*seen.lost, *(name for name in seen.names if name not in names)]:
         result.readings.extend(_lost(name, sight))
     result.readings.append(Reading(item="all", quantity="line_count", value=float(seen.count), unit="1"))
     for defect in seen.defects:
