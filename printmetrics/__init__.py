@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 from printmetrics._version import __version__
 
 if TYPE_CHECKING:
-    from printmetrics.batch import measure_folder
+    from printmetrics.batch import measure_folder, plan_run
     from printmetrics.inspect import inspect_picture
     from printmetrics.io.pictures import find_pictures, read_picture
     from printmetrics.recipe import Recipe, load_recipe
@@ -26,6 +26,7 @@ _HOME = {
     "judge": "printmetrics.verdict",
     "load_recipe": "printmetrics.recipe",
     "measure_folder": "printmetrics.batch",
+    "plan_run": "printmetrics.batch",
     "read_picture": "printmetrics.io.pictures",
 }
 
@@ -38,6 +39,7 @@ __all__ = [
     "judge",
     "load_recipe",
     "measure_folder",
+    "plan_run",
     "read_picture",
 ]
 
