@@ -160,6 +160,8 @@ class RunSummary:
         Verdicts by feature and quantity.
     spans : dict
         Likewise, of the main quantities without limits, what was read.
+    notes : dict
+        What was done, or left undone, with tags of the files: the names of the pictures concerned, by note.
     """
 
     out: Path
@@ -170,6 +172,7 @@ class RunSummary:
     reasons: dict[str, str] = field(default_factory=dict)
     tallies: dict[tuple[str, str], Tally] = field(default_factory=dict)
     spans: dict[tuple[str, str], Span] = field(default_factory=dict)
+    notes: dict[str, list[str]] = field(default_factory=dict)
 
     @property
     def all_conform(self) -> bool:
@@ -361,7 +364,8 @@ class _Record:
     def add(self, outcome: Outcome) -> None:
         """Write one picture's rows, its row among the pictures last, so that what stands there is complete."""
         found, summary = outcome.inspection, self._summary
-        doubt = Flag.REPEATED_PICTURE if self._repeated(outcome) else Flag.NONE
+        # A picture that failed, say by its name, was not measured: its twin is no repetition.
+        doubt = Flag.REPEATED_PICTURE if found.status == "measured" and self._repeated(outcome) else Flag.NONE
         columns = {**outcome.columns, **self._common}
         rows = [{**columns, **row, "flags": (row["flags"] | doubt).words()} for row in found.rows]
         self._write(MEASUREMENTS, rows)
@@ -377,6 +381,8 @@ class _Record:
             summary.failed += 1
         else:
             summary.measured += 1
+        for note in outcome.notes:
+            summary.notes.setdefault(note, []).append(outcome.image)
         if found.reason:
             summary.reasons[outcome.image] = found.reason
         for row in found.rows:
@@ -418,6 +424,7 @@ class _Record:
             "scale_id": plan.recipe.scale_id,
             "columns": plan.columns,
             "pictures": {"found": summary.found, "measured": summary.measured, "failed": summary.failed},
+            "notes": [{"note": note, "pictures": len(n), "such_as": n[0]} for note, n in summary.notes.items()],
             "started_at": self._started,
             "ended_at": None if status == "running" else _now(),
             "decision_rule": {"guard_band": f"{GUARD} u", "text": DECISION_RULE},

@@ -67,6 +67,8 @@ class Outcome:
         Traceback of a bug, else empty.
     paged : bool
         Whether it is a page of a file with several.
+    notes : tuple of str
+        What was done, or left undone, with tags of the file.
     """
 
     image: str
@@ -77,6 +79,7 @@ class Outcome:
     drawing: tuple[str, bytes] | None = None
     log: str = ""
     paged: bool = False
+    notes: tuple[str, ...] = ()
 
 
 def measure_one(task: Task) -> Outcome:
@@ -125,6 +128,7 @@ def measure_one(task: Task) -> Outcome:
         drawing=drawing,
         log=log,
         paged=task.found.page is not None,
+        notes=picture.notes if picture else (),
     )
 
 

@@ -84,6 +84,7 @@ def measure(  # noqa: PLR0913  # numpydoc ignore=PR01
         ctx.exit(INTERRUPTED)
     if not quiet:
         _print_summary(summary)
+        _print_notes(summary)
     _print_failures(summary)
     if summary.failed:
         ctx.exit(SOME_FAILED)
@@ -174,6 +175,14 @@ def _where(row: dict[str, Any]) -> str:
 def _limits(row: dict[str, Any]) -> str:
     ends = ("" if row[end] is None else f"{row[end]:g}" for end in ("lower", "upper"))
     return " .. ".join(ends).strip()
+
+
+def _print_notes(summary: RunSummary) -> None:
+    for note, images in summary.notes.items():
+        where = (
+            _printable(images[0]) if len(images) == 1 else f"{len(images)} pictures, such as {_printable(images[0])}"
+        )
+        click.echo(f"note: {note} ({where})", err=True)
 
 
 def _print_failures(summary: RunSummary) -> None:

@@ -106,7 +106,7 @@ def read_exif(blob: bytes) -> tuple[str | None, tuple[str, ...]]:
                 tags = tif.pages.first.tags
                 return captured_at(tags), orientation_note(tags)
         except Exception:  # noqa: BLE001  (whatever the parser raises on bad bytes, the pixels are good)
-            return None, ("EXIF block cannot be read",)
+            return None, ("the EXIF block cannot be read: no time and no orientation is taken from it",)
 
 
 def captured_at(tags: TiffTags) -> str | None:

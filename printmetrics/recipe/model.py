@@ -519,7 +519,7 @@ class Recipe(_Section):
         match = re.fullmatch(self.images.context, stem)
         if match is None:
             msg = (
-                f"the name {stem!r} doesn't match the recipe's context {self.images.context!r}; "
+                f"the name {stem!r} doesn't match the recipe's context '{self.images.context}'; "
                 "rename the picture or change context"
             )
             raise PictureError(msg)

@@ -31,8 +31,6 @@ if TYPE_CHECKING:
     from printmetrics.measure.readings import Measured
     from printmetrics.measure.sight import Sight
 
-COMMAND = Path(sys.executable).with_name("printmetrics")
-
 
 def _measure(folder: Path, *options: str, workers: int = 1) -> Result:
     home = folder.parent
@@ -207,6 +205,26 @@ def test_same_picture_under_another_name_is_flagged_on_the_later_one(folder: Pat
     assert flagged == {"a.png": False, "b.png": False, "c.png": True}
 
 
+def test_good_picture_is_no_repetition_of_a_twin_that_failed_by_its_name(folder: Path, png: bytes) -> None:
+    _edit(folder, "[scale]", "[images]\ncontext = '(?P<lane>[b-z])'\n[scale]")
+    (folder / "c.png").write_bytes(png)
+    _measure(folder)
+    assert [row["status"] for row in _table(folder.parent / "out", "images")] == ["failed", "measured", "measured"]
+    assert not any("repeated" in row["flags"] for row in _table(folder.parent / "out", "measurements"))
+
+
+def test_tag_that_is_not_applied_is_told_once_and_kept_in_the_record(folder: Path) -> None:
+    pixels = cv2.imread(str(folder / "a.png"), cv2.IMREAD_GRAYSCALE)
+    for name in ("t.tif", "u.tif"):
+        tifffile.imwrite(folder / name, pixels, extratags=[(274, "H", 1, 6, False)], metadata=None)
+    result = _measure(folder)
+    note = "orientation tag 6 not applied: pixels are taken as stored"
+    assert result.stderr.count("orientation") == 1
+    assert f"note: {note} (2 pictures, such as t.tif)\n" in result.stderr
+    run = json.loads((folder.parent / "out" / "run.json").read_text())
+    assert run["notes"] == [{"note": note, "pictures": 2, "such_as": "t.tif"}]
+
+
 def test_set_fills_a_column(folder: Path) -> None:
     _measure(folder, "--set", "lot=L7", "--set", "source=camera 2")
     (pair,) = {(row["lot"], row["source"]) for row in _table(folder.parent / "out", "measurements")}
@@ -214,11 +232,11 @@ def test_set_fills_a_column(folder: Path) -> None:
 
 
 def test_name_that_does_not_match_the_context_fails_its_picture(folder: Path) -> None:
-    _edit(folder, "[scale]", "[images]\ncontext = '(?P<lane>a)'\n[scale]")
+    _edit(folder, "[scale]", "[images]\ncontext = '(?P<lane>a\\d?)'\n[scale]")
     assert _measure(folder).exit_code == 1
     first, second = _table(folder.parent / "out", "images")
     assert (first["status"], second["status"]) == ("measured", "failed")
-    assert "doesn't match the recipe's context" in second["reason"]
+    assert r"doesn't match the recipe's context '(?P<lane>a\d?)'; rename" in second["reason"]
 
 
 def test_unreadable_picture_keeps_what_its_name_says(folder: Path) -> None:
@@ -441,8 +459,11 @@ def _many(folder: Path, png: bytes, number: int) -> None:
 def _start(folder: Path, workers: int) -> subprocess.Popen[str]:
     home = folder.parent
     options = ["--recipe", home / "recipe.toml", "--out", home / "out", "--workers", str(workers)]
+    # A shell may have started the tests with Ctrl-C ignored, which a process inherits.
+    code = "import signal; signal.signal(signal.SIGINT, signal.default_int_handler); "
+    code += "from printmetrics.cli import main; main()"
     return subprocess.Popen(
-        [COMMAND, "measure", folder, *options],
+        [sys.executable, "-c", code, "measure", folder, *options],
         stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, start_new_session=True,
     )  # fmt: skip
 

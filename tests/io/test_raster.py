@@ -180,7 +180,7 @@ def test_exif_time_comes_with_its_offset(tmp_path: Path) -> None:
 def test_damaged_exif_costs_the_time_not_the_picture(tmp_path: Path) -> None:
     picture = read(tmp_path / "x.jpg", jpeg_with_exif(smooth(), b"MM\0*rubbish"))
     assert picture.captured_at is None
-    assert picture.notes == ("EXIF block cannot be read",)
+    assert picture.notes == ("the EXIF block cannot be read: no time and no orientation is taken from it",)
 
 
 def test_png_and_jpeg_give_no_scale(tmp_path: Path) -> None:
