@@ -56,7 +56,8 @@ def test_flags_are_those_of_the_program_and_decisive_ones_are_said_to_be() -> No
         (Flag.OUTSIDE_VALIDITY, f"e^{line._MISMATCH:g}"),
         (Flag.OUTSIDE_VALIDITY, f"more than {line._MATTERS:.0%}"),
         (Flag.LOW_CONTRAST, f"below {line._LOW_CONTRAST:g} times"),
-        (Flag.SHARPENED, f"more than {line._SHARPENED:.0%}"),
+        (Flag.SHARPENED, f"more than {line._SHARPENED:.1%}"),
+        (Flag.OUTSIDE_VALIDITY, f"skewed by more than {line._SKEWED:.1%}"),
         (Flag.UNEVEN_LIGHT, f"more than {line._UNEVEN:.0%}"),
     ],
 )
