@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 from printmetrics._version import __version__
 
 if TYPE_CHECKING:
-    from printmetrics.batch import measure_folder, plan_run
+    from printmetrics.batch.folder import measure_folder, plan_run
     from printmetrics.inspect import inspect_picture
     from printmetrics.io.pictures import find_pictures, read_picture
     from printmetrics.recipe import Recipe, load_recipe
@@ -25,8 +25,8 @@ _HOME = {
     "inspect_picture": "printmetrics.inspect",
     "judge": "printmetrics.verdict",
     "load_recipe": "printmetrics.recipe",
-    "measure_folder": "printmetrics.batch",
-    "plan_run": "printmetrics.batch",
+    "measure_folder": "printmetrics.batch.folder",
+    "plan_run": "printmetrics.batch.folder",
     "read_picture": "printmetrics.io.pictures",
 }
 

@@ -15,7 +15,7 @@ from printmetrics.cli import INTERRUPTED
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator
 
-    from printmetrics.batch import RunSummary
+    from printmetrics.batch.folder import RunSummary
     from printmetrics.batch.work import Drawn, Outcome
 
 SOME_FAILED = 1
@@ -66,7 +66,7 @@ def measure(  # noqa: PLR0913  # numpydoc ignore=PR01
     """
     for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"):
         os.environ.setdefault(name, "1")  # read once, when numpy is imported just below
-    from printmetrics.batch import measure_folder, plan_run  # noqa: PLC0415  (keeps --help fast)
+    from printmetrics.batch.folder import measure_folder, plan_run  # noqa: PLC0415  (keeps --help fast)
 
     plan = plan_run(folder, recipe_path, out, settings)
     for note in () if quiet else plan.recipe.notes:
