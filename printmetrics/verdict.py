@@ -18,7 +18,7 @@ DECISION_RULE = (
 Verdict = Literal["", "conforming", "nonconforming", "undecided"]
 
 
-def judge(  # noqa: PLR0913, PLR0917  (a reading and its limits)
+def judge(
     quantity_is_count: bool,
     value: float | None,
     u: float | None,

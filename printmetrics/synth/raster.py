@@ -94,7 +94,7 @@ def _ramp(v: NDArray[np.float64], sigma: float) -> NDArray[np.float64]:
     return np.asarray(v * ndtr(z) + sigma / np.sqrt(2 * np.pi) * np.exp(-0.5 * z * z))
 
 
-def _blur(  # noqa: PLR0913, PLR0917  (one private place)
+def _blur(
     band: NDArray[np.int64],
     x: NDArray[np.float64],
     height: NDArray[np.float64],

@@ -53,7 +53,7 @@ def _amplitudes(count: int, step: float, correlation_length: float, exponent: fl
     return np.asarray(np.sqrt(np.maximum(spectrum, 0.0) / count))
 
 
-def rough_pair(  # noqa: PLR0913  (the process has that many parameters)
+def rough_pair(
     count: int,
     step: float,
     *,
