@@ -24,7 +24,7 @@ _WEIGHTS = {"luminance": LUMINANCE, "red": (1.0, 0.0, 0.0), "green": (0.0, 1.0, 
 _ROWS_AT_ONCE = 64
 
 
-def linear_light(  # noqa: PLR0913  (each is a key of the recipe)
+def linear_light(
     pixels: NDArray[Any],
     full_scale: float,
     *,

@@ -179,7 +179,7 @@ class _Tracer:
         before = np.concatenate([np.full((1, some.shape[2]), -0.5), some[:-1, 1]])
         after = np.concatenate([some[1:, 0], np.full((1, some.shape[2]), self.width - 0.5)])
         gaps = np.stack([some[:, 0] - before, after - some[:, 1]], axis=1)
-        return np.maximum(np.median(gaps, axis=2), 1.0)
+        return np.asarray(np.maximum(np.median(gaps, axis=2), 1.0))
 
     def _first_levels(self) -> NDArray[np.float64]:
         """Bare, ink, bare levels of each line as first guessed."""
@@ -199,10 +199,10 @@ class _Tracer:
         blur: float,
         every: int = 1,
         reach: dict[tuple[int, int], int] | None = None,
-    ) -> dict[tuple[int, int], Any]:
+    ) -> dict[tuple[int, int], tuple[NDArray[np.intp], NDArray[np.float64]]]:
         """Return rows and columns of edges by their first crossing beside the coarse course."""
         todo = reach or {edge: math.ceil(3 * blur) + _SEARCH_PX for edge in wanted}
-        found = {}
+        found: dict[tuple[int, int], tuple[NDArray[np.intp], NDArray[np.float64]]] = {}
         while todo:
             alike: dict[tuple[int, int], list[tuple[int, int]]] = {}
             for (k, side), far in todo.items():

@@ -34,11 +34,7 @@ def found(image: NDArray[np.float32], *, bright: bool = True, vertical: bool | N
     return find_lines(image, find_direction(image, vertical=vertical).slope, bright=bright)
 
 
-
-
-@pytest.mark.parametrize(
-    "tilt", [-30, -17, -5, 0, 2, 12, 30]
-)
+@pytest.mark.parametrize("tilt", [-30, -17, -5, 0, 2, 12, 30])
 @pytest.mark.parametrize(("direction", "dark"), [("vertical", False), ("horizontal", True)])
 def test_direction_is_found_within_a_degree(tilt: float, direction: str, dark: bool) -> None:
     image = picture([-45.0, 0.0, 45.0], 15.0, tilt=tilt, direction=direction, dark=dark)

@@ -96,7 +96,8 @@ def straighten(points: NDArray[np.float64], slope: float, pitch: float) -> Strai
         sides.append(((along + slope * across) / root, (across - slope * along) / root))
     # Half way between the edges' own ends, so that no row is lost to their being out of step.
     start, stop = (sum(float(s[end]) for s, _ in sides) / 2 for end in (0, -1))
-    grid = start + step * np.arange(max(round((stop - start) / step) + 1, 1))
+    places = np.arange(max(round((stop - start) / step) + 1, 1), dtype=np.float64)
+    grid = np.asarray(start + step * places)
     (left, left_gain), (right, right_gain) = (_on_grid(s, t, grid, step) for s, t in sides)
     return Straightened(
         s=grid, left=left, right=right, step=step, slope=slope, transfer=np.array([left_gain, right_gain])

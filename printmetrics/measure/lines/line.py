@@ -20,7 +20,7 @@ from printmetrics.quantities import CATALOGUE
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from printmetrics.analysis.tracing import EdgeShape
+    from printmetrics.analysis.tracing import EdgeShape, Trace
     from printmetrics.measure.lines.options import LinesOptions
     from printmetrics.measure.lines.seeing import Seen
     from printmetrics.measure.sight import Sight
@@ -255,56 +255,62 @@ def _record(line: LineFigures, name: str, blur: float) -> Record | None:
 
 def _flags(seen: Seen, k: int, sight: Sight, blur: NDArray[np.float64], options: LinesOptions) -> Flag:
     """Judge a line as a whole; each criterion stands in the documentation of the flags."""
-    trace, flags = seen.traces[k], Flag.NONE
-    contrast = trace.contrast
-    if contrast < _LOW_CONTRAST * trace.noise:
-        flags |= Flag.LOW_CONTRAST
-    if trace.bare_range > _UNEVEN * contrast:
-        flags |= Flag.UNEVEN_LIGHT
-    if np.mean([shape.overshoot for shape in trace.shapes]) > _SHARPENED:
-        flags |= Flag.SHARPENED
-    if abs(np.mean([shape.skew for shape in trace.shapes])) > _SKEWED:
-        flags |= Flag.OUTSIDE_VALIDITY
-    if not trace.way.all():
-        flags |= Flag.CUT_BY_BORDER
+    trace = seen.traces[k]
     sigma = float(trace.blur.max())
-    width = trace.width
-    if width < _RESOLVED_BLURS * sigma:
+    doubts = {
+        Flag.LOW_CONTRAST: trace.contrast < _LOW_CONTRAST * trace.noise,
+        Flag.UNEVEN_LIGHT: trace.bare_range > _UNEVEN * trace.contrast,
+        Flag.SHARPENED: np.mean([shape.overshoot for shape in trace.shapes]) > _SHARPENED,
+        Flag.OUTSIDE_VALIDITY: abs(np.mean([shape.skew for shape in trace.shapes])) > _SKEWED,
+        Flag.CUT_BY_BORDER: not trace.way.all(),
+        Flag.NOT_RESOLVED: trace.width < _RESOLVED_BLURS * sigma,
+        Flag.LEVELS_UNRESOLVED: _least_gap(seen, k) < _SPACE_BLURS * sigma,
+        Flag.SATURATED: seen.saturated is not None and _saturated_share(seen.saturated, trace) > _SATURATED,
+        Flag.COUNT_DIFFERS: _count_differs(seen, k, options),
+    }
+    flags = Flag.NONE
+    for flag, doubtful in doubts.items():
+        if doubtful:
+            flags |= flag
+    return flags | _optical_flags(trace.width / math.hypot(1.0, seen.direction.slope), float(blur.max()), sight)
+
+
+def _optical_flags(width_px: float, blur: float, sight: Sight) -> Flag:
+    """Judge width and blur against the objective, where the recipe tells it."""
+    flags = Flag.NONE
+    if sight.na is None or sight.wavelength_um is None or sight.scale.unit != "um":
+        return flags
+    optical, per_px = sight.wavelength_um / sight.na, sight.scale.mean
+    if width_px * per_px < _RESOLVED_RAYLEIGH * optical:
         flags |= Flag.NOT_RESOLVED
-    for j in (k - 1, k + 1):
-        if 0 <= j < len(seen.traces):
-            low, high = sorted((k, j))
-            every = max(1, len(trace.way) // _TYPICAL_ROWS)
-            gap = seen.traces[high].course[0, ::every] - seen.traces[low].course[1, ::every]
-            space = float(np.median(gap))
-            if space < _SPACE_BLURS * sigma:
-                flags |= Flag.LEVELS_UNRESOLVED
-    if sight.na is not None and sight.wavelength_um is not None and sight.scale.unit == "um":
-        optical = sight.wavelength_um / sight.na
-        per_px = sight.scale.mean
-        if width * per_px / math.hypot(1.0, seen.direction.slope) < _RESOLVED_RAYLEIGH * optical:
-            flags |= Flag.NOT_RESOLVED
-        if float(blur.max()) > _DEFOCUSED * math.hypot(_SLOPE_BLUR * optical, per_px / math.sqrt(12)):
-            flags |= Flag.DEFOCUSED
-    if seen.saturated is not None and _saturated_share(seen, k) > _SATURATED:
-        flags |= Flag.SATURATED
-    if seen.expected is not None:
-        extra = int(seen.names[k][1:]) > seen.expected
-        if extra or (options.centres is None and seen.count != seen.expected):
-            flags |= Flag.COUNT_DIFFERS
+    if blur > _DEFOCUSED * math.hypot(_SLOPE_BLUR * optical, per_px / math.sqrt(12)):
+        flags |= Flag.DEFOCUSED
     return flags
 
 
-def _saturated_share(seen: Seen, k: int) -> float:
+def _least_gap(seen: Seen, k: int) -> float:
+    """Typical space to the nearer neighbour along the row. [px]."""
+    every = max(1, len(seen.traces[k].way) // _TYPICAL_ROWS)
+    pairs = [(j, j + 1) for j in (k - 1, k) if j >= 0 and j + 1 < len(seen.traces)]
+    gaps = [seen.traces[b].course[0, ::every] - seen.traces[a].course[1, ::every] for a, b in pairs]
+    return min((float(np.median(gap)) for gap in gaps), default=math.inf)
+
+
+def _count_differs(seen: Seen, k: int, options: LinesOptions) -> bool:
+    """Tell whether the line is one too many, or may be another than its name says."""
+    if seen.expected is None:
+        return False
+    return int(seen.names[k][1:]) > seen.expected or (options.centres is None and seen.count != seen.expected)
+
+
+def _saturated_share(saturated: NDArray[np.bool_], trace: Trace) -> float:
     """Share of saturated pixels within 4 blurs of the line's edges."""
-    assert seen.saturated is not None
-    trace = seen.traces[k]
     reach = math.ceil(4 * float(trace.blur.max()))
     rows = np.nonzero(np.isfinite(trace.edges).all(axis=0))[0]
     shares = []
     for edge in trace.edges[:, rows]:
         columns = np.rint(edge).astype(int)[:, None] + np.arange(-reach, reach + 1)
-        shares.append(seen.saturated[rows[:, None], np.clip(columns, 0, seen.saturated.shape[1] - 1)].mean())
+        shares.append(saturated[rows[:, None], np.clip(columns, 0, saturated.shape[1] - 1)].mean())
     return float(max(shares))
 
 
@@ -504,8 +510,7 @@ class _LineReadings:
                 if side:
                     self.add(f"raggedness_{side}", raw, flags=self.rough_flags)
                 continue
-            rough = self.rough if not side else unbiased_sd(values, process)
-            assert rough is not None
+            rough = self.rough if self.rough is not None and not side else unbiased_sd(values, process)
             dof = max(rough.sd**2 / (2.0 * rough.u_sampling**2), 1.0) if rough.u_sampling > 0 else math.inf
             u = {"noise": rough.u_noise, "sampling": rough.u_sampling}
             # What is known of the true scatter, carried over to the scatter as seen.
@@ -592,4 +597,4 @@ def _covered(s: NDArray[np.float64], straight: Straightened) -> NDArray[np.bool_
     """Tell which places are measured in the line without its defects."""
     at = np.rint((s - straight.s[0]) / straight.step).astype(int)
     inside = (at >= 0) & (at < len(straight.s))
-    return inside & np.isfinite(straight.width[np.clip(at, 0, len(straight.s) - 1)])
+    return np.asarray(inside & np.isfinite(straight.width[np.clip(at, 0, len(straight.s) - 1)]))

@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from printmetrics.flags import Flag
 from printmetrics.analysis.roughness import Process, amplitude_filter, unbiased_sd
+from printmetrics.flags import Flag
 from printmetrics.measure.lines.line import END_SHARE, NECK_BLURS, LineFigures, move_within, running_mean
 from printmetrics.measure.readings import Reading, effective_dof
 from printmetrics.quantities import CATALOGUE

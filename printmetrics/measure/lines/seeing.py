@@ -117,22 +117,21 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
         saturated = saturated if direction.vertical else saturated.T
         if row_step > 1:
             saturated = saturated[: 2 * len(image) : 2] | saturated[1 : 2 * len(image) : 2]
-    traces = trace_lines(image, found)
+    tried = trace_lines(image, found)
     # What shows edges over half its way and can't be fitted is a letter or a drop rather than a line.
-    real = [trace is not None or line.covered > _LINE_ALIKE for line, trace in zip(found, traces, strict=True)]
+    real = [trace is not None or line.covered > _LINE_ALIKE for line, trace in zip(found, tried, strict=True)]
     found = [line for line, keep in zip(found, real, strict=True) if keep]
-    traces = [trace for trace, keep in zip(traces, real, strict=True) if keep]
+    tried = [trace for trace, keep in zip(tried, real, strict=True) if keep]
     expected = options.count if options.centres is None else len(options.centres)
     middle = len(image) // 2
     places = [float(np.interp(middle, line.rows, (line.left + line.right) / 2)) for line in found]
     names = _names(places, direction, origin, sight, options)
-    lost = [name for name, trace in zip(names, traces, strict=True) if trace is None]
-    names = [name for name, trace in zip(names, traces, strict=True) if trace is not None]
-    kept = [trace for trace in traces if trace is not None]
-    if not kept:
+    lost = [name for name, trace in zip(names, tried, strict=True) if trace is None]
+    names = [name for name, trace in zip(names, tried, strict=True) if trace is not None]
+    traces = [trace for trace in tried if trace is not None]
+    if not traces:
         msg = f"no line can be measured: {len(found)} found, but their edges could not be fitted; look at the picture"
         raise FeatureError(msg, Flag.LEVELS_UNRESOLVED, count=len(found))
-    traces = kept
     edges, coarse = np.concatenate([t.edges for t in traces]), np.concatenate([t.course for t in traces])
     course = smooth_courses(edges, coarse).reshape(len(traces), 2, -1)
     ink = _ink(image, traces, bright=options.ink == "bright")
@@ -207,7 +206,7 @@ def _pairs_of_rows(image: NDArray[Any]) -> NDArray[Any]:
     """Add up pairs of rows: a tall picture has more rows along an edge than its blur lets differ."""
     even = len(image) // 2 * 2
     sums = {"uint8": np.uint16}.get(image.dtype.name, np.float32)
-    return np.add(image[0:even:2], image[1:even:2], dtype=sums)
+    return np.asarray(np.add(image[0:even:2], image[1:even:2], dtype=sums))
 
 
 @dataclass(frozen=True, slots=True)

@@ -343,8 +343,6 @@ def test_piece_shorter_than_20_correlation_lengths_is_short(take: Fixture, read:
 # --- crowded and small
 
 
-
-
 # Truth: neighbours down to a space of 4 blurs are promised; here they fill the picture.
 @pytest.mark.parametrize(
     ("width", "space", "blur"),
