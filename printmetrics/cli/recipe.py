@@ -26,7 +26,7 @@ def recipe() -> None:
 
 @recipe.command()
 @click.argument("file", metavar="R.toml", type=_FILE)
-def check(file: Path) -> None:
+def check(file: Path) -> None:  # numpydoc ignore=PR01
     """Check a recipe and all it refers to, and say what it will do."""
     checked = load_recipe(file)
     sizes = correction_sizes(checked)
@@ -77,7 +77,7 @@ def schema() -> None:
 
 @recipe.command()
 @click.argument("file", metavar="R.toml", type=_FILE)
-def start(file: Path) -> None:
+def start(file: Path) -> None:  # numpydoc ignore=PR01
     """Write a recipe to start from, every key explained."""
     text = files("printmetrics.recipe").joinpath("start.toml").read_text(encoding="utf-8")
     try:
