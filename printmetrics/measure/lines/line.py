@@ -584,7 +584,20 @@ def _sd(values: NDArray[np.float64], *, line_removed: bool) -> float:
 
 
 def running_mean(values: NDArray[np.float64], count: int) -> NDArray[np.float64]:
-    """Mean over `count` neighbours, where at least half of them are known."""
+    """Return the mean over neighbours, where at least half of them are known.
+
+    Parameters
+    ----------
+    values : ndarray of float, shape (n,)
+        Series; NaN where not measured.
+    count : int
+        Neighbours averaged over.
+
+    Returns
+    -------
+    ndarray of float, shape (n,)
+        NaN where too few are known.
+    """
     good = np.isfinite(values)
     count = min(count, len(values))
     total = np.convolve(np.where(good, values, 0.0), np.ones(count), mode="same")

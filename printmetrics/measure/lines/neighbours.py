@@ -51,7 +51,7 @@ def neighbour_readings(
     flags = one.flags | two.flags
     unit = sight.scale.unit
 
-    def reading(quantity: str, value: float | None, **rest: float | Flag | None) -> Reading:
+    def reading(quantity: str, value: float | None, **rest: float | Flag | None) -> Reading:  # numpydoc ignore=GL08
         return Reading(
             item=item,
             quantity=quantity,

@@ -77,13 +77,35 @@ class Seen:
     expected: int | None
 
     def to_picture(self, along: NDArray[np.float64], across: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Turn rows and columns of the region into x and y of the picture, shape (n, 2). [px]"""
+        """Turn places in `image` into places in the picture.
+
+        Parameters
+        ----------
+        along, across : ndarray of float, shape (n,)
+            Rows and columns of `image`.
+
+        Returns
+        -------
+        ndarray of float, shape (n, 2)
+            x and y. [px]
+        """
         along = self.to_rows(along)
         x, y = (across, along) if self.direction.vertical else (along, across)
         return np.column_stack([x + self.origin[0], y + self.origin[1]])
 
     def to_rows(self, along: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Turn rows of `image` into rows of the region. [px]."""
+        """Turn rows of `image` into rows of the region.
+
+        Parameters
+        ----------
+        along : ndarray of float, shape (n,)
+            Rows of `image`.
+
+        Returns
+        -------
+        ndarray of float, shape (n,)
+            Rows of the region, or its columns where the lines lie. [px]
+        """
         return along * self.row_step + (self.row_step - 1) / 2
 
 
