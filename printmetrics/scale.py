@@ -64,7 +64,7 @@ class Scale:
 
     @property
     def mean(self) -> float:
-        """Geometric mean of x and y. [um/px]"""
+        """Geometric mean of x and y, in um per px."""
         return math.sqrt(self.x * self.y)
 
     def to_length(self, points_px: ArrayLike) -> NDArray[np.float64]:
