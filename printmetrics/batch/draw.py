@@ -205,7 +205,7 @@ def _draw_shapes(canvas: NDArray[np.uint8], inspection: Inspection, place: _Plac
             points = place(shape.points_px)
             if role == "missing":
                 points = _dashed(points, 12 * text / 0.42)
-            if role == "event":
+            if role in {"event", "missing"}:
                 _polyline(canvas, points, (0, 0, 0), thick + 2)
             _polyline(canvas, points, colour, thick)
     taken: list[Box] = []
