@@ -374,11 +374,13 @@ class _Fit:
         for g in range(len(self.sizes)):
             # Each row's position follows its noise, which makes the aligned edge look sharper by just that variance.
             blur = math.hypot(self.blur[g], float(u[:, g].mean())) if self.free[g] else float(self.blur[g])
+            # In strong noise positions scatter more than the linear step says: to the second order, by this.
+            second = 1.0 + (float(u[:, g].mean()) / blur) ** 2
             fits.append(
                 EdgeFit(
                     position=position[:, self.starts[g] : self.starts[g + 1]],
                     u_row=u[:, g],
-                    mean_covariance=(own[:, :, g] + carried[g]) * self.noise[g] ** 2,
+                    mean_covariance=(own[:, :, g] + carried[g]) * (self.noise[g] * second) ** 2,
                     blur=blur,
                     u_blur=math.sqrt(self.shared_fit.blur_var[g]) * float(self.noise[g]),
                     levels=self.shared[self.block_group == g],
