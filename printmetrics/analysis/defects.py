@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 _FEWEST_ROWS, _COURSE_ROWS = 8, 256  # a cubic and its scatter need the one, and gain nothing beyond the other
+_COURSE_TERMS = (2, 2, 2, 4, 4, 4, 4)  # of the course, fit by fit
 _OUTLIER = 5.2  # median deviations: 3.5 sd
 _STAND_OUT = 10.0  # half the contrast stands five noise sds out of the smoothed picture
 
@@ -182,14 +183,16 @@ def smooth_courses(edges: NDArray[np.float64], coarse: NDArray[np.float64]) -> N
     weight = known.astype(np.float64)
     middle = np.maximum(known.sum(axis=1) // 2, 0)
     fit = np.zeros((len(edges), 4))
-    for terms in (2, 2, 4, 4):
+    for turn, terms in enumerate(_COURSE_TERMS):
         part = basis[:, :terms]
         normal = (weight @ (part[:, :, None] * part[:, None, :]).reshape(len(rows), -1)).reshape(-1, terms, terms)
         fit[:, :terms] = np.linalg.solve(normal + 1e-9 * np.eye(terms), ((weight * y) @ part)[..., None])[..., 0]
         off = np.where(known, np.abs(y - fit @ basis.T), np.inf)
         typical = np.sort(off, axis=1)[np.arange(len(edges)), np.minimum(middle, len(rows) - 1)]
-        weight = (off <= _OUTLIER * typical[:, None] + 1e-6) & known
-        weight = weight.astype(np.float64)
+        # Least absolute deviations first: a long neck must not draw the course to itself.
+        weight = known / np.maximum(np.where(known, off, 1.0), 0.5 * typical[:, None] + 1e-6)
+        if turn >= len(_COURSE_TERMS) - 2:
+            weight = ((off <= _OUTLIER * typical[:, None] + 1e-6) & known).astype(np.float64)
     course = fit @ np.polynomial.legendre.legvander(place, 3).T
     for k in range(len(edges)):
         measured = rows[known[k]]

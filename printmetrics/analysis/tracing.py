@@ -34,7 +34,8 @@ _SMOOTH_EDGE = 0.12  # an edge that strays less from its coarse course, in blurs
 _KNOWN_BLUR = 5.0  # narrower than this many blurs, a line takes its blur from wider ones where there are any
 _PASSES = 8  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
-_SHAPE_ROWS = 128  # the edge's shape and other typical values are judged on so many rows
+_SHAPE_ROWS = 256  # the edge's shape and other typical values are judged on so many rows
+_UNCORRELATED = 0.06  # correlation of neighbouring residuals that the fit itself and chance may leave
 _SURE, _STEADY = 4.0, 4.0  # standard errors by which the edge's shape must stand out of the noise
 _BESIDE, _CORE, _CLEAR_OF = (
     (1.3, 2.6),
@@ -46,7 +47,7 @@ _FEWEST_ROWS = 16
 
 @dataclass(frozen=True, slots=True)
 class EdgeShape:
-    """How the mean edge seen differs from the model; 0 where it stands not out of the noise.
+    """How the mean edge seen differs from the model.
 
     Parameters
     ----------
@@ -54,8 +55,9 @@ class EdgeShape:
         How far the levels beside the edge go beyond the plateaus, over the step; sharpening makes it positive.
     shift : float
         How far the middle of the edge seen lies from that of the edge fitted. [px]
-    skew : float
-        Mean residual of the core minus that of the flanks, over the step; a camera's gamma left in makes one.
+    skew, u_skew : float
+        Mean residual of the core minus that of the flanks, over the step, and its standard uncertainty; a camera's
+        gamma left in makes one.
     steady : float
         How far a pattern fixed to the picture's columns may shift the edge. [px]
     """
@@ -63,6 +65,7 @@ class EdgeShape:
     overshoot: float = 0.0
     shift: float = 0.0
     skew: float = 0.0
+    u_skew: float = 0.0
     steady: float = 0.0
 
 
@@ -133,7 +136,7 @@ class _Cut:
     blur: float
     known: bool
     fit: EdgeFit | None = None
-    shape: list[EdgeShape] = field(default_factory=list)
+    shape: tuple[list[EdgeShape], float] = field(default_factory=lambda: ([], 1.0))
 
 
 def trace_lines(image: NDArray[Any], lines: Sequence[CoarseLine]) -> list[Trace | None]:
@@ -424,10 +427,11 @@ class _Tracer:
             assert fit is not None  # noqa: S101  (looked at above)
             at = [cut.edges.index(own) for own in cut.own]
             sides = [side for _, side in cut.own]
-            covariance[np.ix_(sides, sides)] = fit.mean_covariance[np.ix_(at, at)]
-            u_row[sides] = fit.u_row[at]
+            own_shapes, correlation = cut.shape
+            covariance[np.ix_(sides, sides)] = fit.mean_covariance[np.ix_(at, at)] * correlation**2
+            u_row[sides] = fit.u_row[at] * math.sqrt(correlation)
             u_blur[sides] = fit.u_blur
-            for side, shape in zip(sides, cut.shape, strict=True):
+            for side, shape in zip(sides, own_shapes, strict=True):
                 shapes[side] = shape
             noise.append(fit.noise)
             for j, side in zip(at, sides, strict=True):
@@ -451,12 +455,12 @@ class _Tracer:
         )
 
     @staticmethod
-    def _shape(pixels: NDArray[np.float32], fit: EdgeFit, own: list[int]) -> list[EdgeShape]:
-        """Compare the mean edge seen with the one fitted."""
+    def _shape(pixels: NDArray[np.float32], fit: EdgeFit, own: list[int]) -> tuple[list[EdgeShape], float]:
+        """Compare the mean edge seen with the one fitted; tell by how much correlated noise scatters a mean more."""
         rows = np.arange(0, pixels.shape[0], max(1, pixels.shape[0] // _SHAPE_ROWS))
         rows = rows[np.isfinite(fit.position[:, rows].sum(axis=0))]
         if len(rows) < _FEWEST_ROWS:
-            return [EdgeShape() for _ in own]
+            return [EdgeShape() for _ in own], 1.0
         levels = np.median(fit.levels, axis=0)
         columns = np.arange(pixels.shape[1])
         u = [(columns - position[rows, None]) / fit.blur for position in fit.position]
@@ -481,13 +485,27 @@ class _Tracer:
             overshoot = float((residual * np.sign(u[j]))[beside].mean()) / step
             overshoot = overshoot if abs(overshoot) > _SURE * noise / math.sqrt(beside.sum()) else 0.0
             middle = float(residual[core].mean()) / step
-            skew = middle - float(residual[flank].mean()) / step
-            sure = len(u) == 1 and abs(skew) > _SURE * noise * math.sqrt(1 / core.sum() + 1 / flank.sum())
+            # Light that isn't linear bends both edges of a line towards the same level, whichever way they step.
+            skew = (float(residual[core].mean()) - float(residual[flank].mean())) / abs(step)
+            u_skew = noise * math.sqrt(1 / core.sum() + 1 / max(flank.sum(), 1))
+            if len(u) > 1:  # the other edges' light is in the flanks
+                skew = u_skew = 0.0
             shift = -middle * math.sqrt(2 * math.pi) * fit.blur
             shift = shift if abs(middle) > _SURE / 2 * noise / math.sqrt(core.sum()) else 0.0
             steady_shift = position_bound(fit.blur, abs(step), steady)
-            shapes.append(EdgeShape(overshoot, shift, skew if sure else 0.0, steady_shift))
-        return shapes
+            shapes.append(EdgeShape(overshoot, shift, skew, u_skew, steady_shift))
+        return shapes, _correlation(residual - residual.mean(axis=0))
+
+
+def _correlation(residual: NDArray[np.float64]) -> float:
+    """Return how much more the mean of noisy edges scatters because pixels share their noise.
+
+    From neighbours along the row; the same is taken to hold from row to row. White noise gives 1, a mean of
+    3 x 3 pixels 3.
+    """
+    power = float(np.mean(residual * residual)) + 1e-30
+    lags = [float(np.mean(residual[:, :-k] * residual[:, k:])) / power for k in (1, 2) if k < residual.shape[1]]
+    return 1.0 + 2.0 * sum(max(lag - _UNCORRELATED, 0.0) for lag in lags)
 
 
 def _sparse(rows: int) -> int:

@@ -38,6 +38,7 @@ _DEFOCUSED = 2.0
 _UNEVEN = 0.25
 _SHARPENED = 0.004
 _SKEWED = 0.004
+_SURE = 3.5  # standard errors by which a skew must stand out
 _SKEW_SHIFT = 35.0  # shift of an edge, in blurs, per skew: measured on gamma 1.2 and 2.2 left in
 _TYPICAL_ROWS = 128
 _NONLINEAR = 0.6  # rms move of an edge within one blur along it, over the blur
@@ -211,16 +212,23 @@ def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFi
         u_point=u_point,
         blur=blur,
         u_blur=trace.u_blur * normal,
-        u_shape=np.array([_u_shape(shape, b) for shape, b in zip(trace.shapes, trace.blur, strict=True)]) * normal,
+        u_shape=np.array([_u_shape(shape, _skew(trace), b) for shape, b in zip(trace.shapes, trace.blur, strict=True)])
+        * normal,
         count=int(np.isfinite(straight.width).sum()),
         level_shift=level_shift(blur, options.edge_level, bright=options.ink == "bright"),
         flags=_flags(seen, k, sight, blur, options),
     )
 
 
-def _u_shape(shape: EdgeShape, blur: float) -> float:
+def _skew(trace: Trace) -> float:
+    """Return the mean skew of a line's edges; 0 where it doesn't stand out of the noise."""
+    skew = sum(shape.skew for shape in trace.shapes) / 2
+    return skew if abs(skew) > _SURE * math.hypot(*(shape.u_skew for shape in trace.shapes)) / 2 else 0.0
+
+
+def _u_shape(shape: EdgeShape, skew: float, blur: float) -> float:
     """Return the standard uncertainty of an edge's position along the row from its shape. [px]."""
-    return math.hypot(abs(shape.shift) / _SQRT3, _SKEW_SHIFT * abs(shape.skew) * blur / _SQRT3, shape.steady)
+    return math.hypot(abs(shape.shift) / _SQRT3, _SKEW_SHIFT * abs(skew) * blur / _SQRT3, shape.steady)
 
 
 def _record(line: LineFigures, name: str, blur: float) -> Record | None:
@@ -261,7 +269,7 @@ def _flags(seen: Seen, k: int, sight: Sight, blur: NDArray[np.float64], options:
         Flag.LOW_CONTRAST: trace.contrast < _LOW_CONTRAST * trace.noise,
         Flag.UNEVEN_LIGHT: trace.bare_range > _UNEVEN * trace.contrast,
         Flag.SHARPENED: np.mean([shape.overshoot for shape in trace.shapes]) > _SHARPENED,
-        Flag.OUTSIDE_VALIDITY: abs(np.mean([shape.skew for shape in trace.shapes])) > _SKEWED,
+        Flag.OUTSIDE_VALIDITY: abs(_skew(trace)) > _SKEWED,
         Flag.CUT_BY_BORDER: not trace.way.all(),
         Flag.NOT_RESOLVED: trace.width < _RESOLVED_BLURS * sigma,
         Flag.LEVELS_UNRESOLVED: _least_gap(seen, k) < _SPACE_BLURS * sigma,
