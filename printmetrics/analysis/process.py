@@ -8,7 +8,6 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 from scipy import fft
-from scipy.signal import windows
 from scipy.special import gamma, gammaln, kv
 
 if TYPE_CHECKING:
@@ -408,7 +407,9 @@ def bin_kernel(n: int, *, line: bool = False) -> BinKernel:
     start = np.unique(np.concatenate([np.arange(1, _SINGLE), np.round(ladder)]).astype(np.int64))
     start = start[start <= last]
     count = np.diff(np.append(start, last + 1)).astype(np.float64)
-    taper = windows.tukey(n, _TAPERED)
+    # A cosine at either end (Tukey's window).
+    end = np.minimum(np.arange(n), np.arange(n)[::-1]) / (_TAPERED * (n - 1) / 2.0)
+    taper = 0.5 - 0.5 * np.cos(np.pi * np.minimum(end, 1.0))
     taper *= np.sqrt(n / np.sum(taper**2))
     response = _responses(taper, start, count, line=line)
 

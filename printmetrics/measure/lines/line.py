@@ -495,13 +495,13 @@ class _LineReadings:
             )
 
     def _blur(self) -> None:
-        """Blur of the edges, freed of the roughness that is finer than itself and widens it."""
+        """Blur of the edges; roughness finer than itself widens it, by how much is known to the half."""
         line = self.line
         seen = float(line.blur.mean())
         edges = [p for p in (line.left, line.right) if p is not None]
         finer = sum(p.sigma**2 * (1.0 - p.kept) for p in edges) / max(len(edges), 1)
         blur = math.sqrt(max(seen**2 - finer, (seen / 2) ** 2))
-        self.add("edge_blur", blur, noise=float(np.hypot(*line.u_blur)) / 2, model=(seen - blur) / 2)
+        self.add("edge_blur", (seen + blur) / 2, noise=float(np.hypot(*line.u_blur)) / 2, model=(seen - blur) / 2)
 
     def _roughness(self) -> None:
         line, straight = self.line, self.line.straight
