@@ -34,6 +34,7 @@ _SMOOTH_EDGE = 0.12  # an edge that strays less from its coarse course, in blurs
 _KNOWN_BLUR = 5.0  # narrower than this many blurs, a line takes its blur from wider ones where there are any
 _PASSES = 8  # fits of one line, at most
 _SETTLED = 0.15  # a fit stands when it changes the blur by less than this part
+_SHAPE_ROWS_TOTAL = 6144  # of all edges together, on which their shapes are judged
 _SHAPE_ROWS = 256  # the edge's shape and other typical values are judged on so many rows
 _UNCORRELATED = 0.06  # correlation of neighbouring residuals that the fit itself and chance may leave
 _SURE, _STEADY = 4.0, 4.0  # standard errors by which the edge's shape must stand out of the noise
@@ -454,10 +455,10 @@ class _Tracer:
             shapes=shapes,
         )
 
-    @staticmethod
-    def _shape(pixels: NDArray[np.float32], fit: EdgeFit, own: list[int]) -> tuple[list[EdgeShape], float]:
+    def _shape(self, pixels: NDArray[np.float32], fit: EdgeFit, own: list[int]) -> tuple[list[EdgeShape], float]:
         """Compare the mean edge seen with the one fitted; tell by how much correlated noise scatters a mean more."""
-        rows = np.arange(0, pixels.shape[0], max(1, pixels.shape[0] // _SHAPE_ROWS))
+        wanted = max(_SHAPE_ROWS_TOTAL // self.blurs.size, _SHAPE_ROWS // 2)
+        rows = np.arange(0, pixels.shape[0], max(1, pixels.shape[0] // wanted))
         rows = rows[np.isfinite(fit.position[:, rows].sum(axis=0))]
         if len(rows) < _FEWEST_ROWS:
             return [EdgeShape() for _ in own], 1.0
