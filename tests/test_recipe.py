@@ -231,6 +231,19 @@ def test_a_mistake_in_toml_is_named_with_line_and_column(tmp_path: Path) -> None
         load(tmp_path, "[images]", "images")
 
 
+@pytest.mark.parametrize(
+    ("old", "new", "words"),
+    [
+        ('ink = "bright"', "ink = bright", "text stands between quotes"),
+        ('ink = "bright"', 'ink = "bright"\nink = "dark"', "given twice; keep one"),
+        ("[images]", "[images]\n[images]", "given twice; keep one"),
+    ],
+)
+def test_common_mistakes_in_toml_are_told_with_their_remedy(tmp_path: Path, old: str, new: str, words: str) -> None:
+    with pytest.raises(RecipeError, match=rf"line \d+, column \d+: .*{words}"):
+        load(tmp_path, old, new)
+
+
 def test_a_backslash_in_double_quotes_is_explained(tmp_path: Path) -> None:
     with pytest.raises(RecipeError, match=r"line 8, column \d+: .*between single quotes"):
         load(tmp_path, "context = '(?P<roll>[^_]+)_(?P<position_m>[^_]+)m_lane(?P<lane>\\d+)", 'context = "\\d')

@@ -106,13 +106,18 @@ def _frozen(value: object) -> object:
     return tuple(map(_frozen, value)) if isinstance(value, list) else value
 
 
+# What the reader of TOML says, and what the usual culprit is.
+_CURES = {
+    "Unescaped": "write patterns and Windows paths between single quotes, where \\ stands for itself",
+    "Invalid value": "text stands between quotes, a number has a decimal point and no unit",
+    "Cannot overwrite a value": "the key is given twice; keep one of them",
+    "Cannot declare": "the heading is given twice; keep one of them, or write [[feature]] for another feature",
+}
+
+
 def _syntax(message: str, file: str) -> str:
     what, _, place = message.partition(" (at ")
     line = re.search(r"line (\d+), column (\d+)", place)
     where = f"line {line[1]}, column {line[2]}" if line else place.rstrip(")") or "somewhere"
-    remedy = (
-        "write patterns and Windows paths between single quotes, where \\ stands for itself"
-        if what.startswith("Unescaped")
-        else "correct the spelling of TOML there"
-    )
+    remedy = next((cure for start, cure in _CURES.items() if what.startswith(start)), "correct the spelling there")
     return f"the recipe cannot be read as TOML:\n  {file}, {where}: {what}; {remedy}"
