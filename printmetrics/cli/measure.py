@@ -160,7 +160,7 @@ def _print_summary(summary: RunSummary) -> None:
                 *(Text(f"{value_words(end['value'], end['expanded_u'], end['unit'])}, {_where(end)}") for end in ends),
             )
         console.print(table)
-        click.echo("these have no limits, so they are not judged\n")
+        click.echo("these are not judged: they have no limits, or the scale is unknown\n")
     drawn = f"{summary.drawn} marked-up pictures in {summary.out / 'pictures'}; " if summary.drawn else ""
     click.echo(
         f"{summary.measured} of {summary.found} pictures measured, {summary.failed} failed; "
@@ -186,8 +186,13 @@ def _print_notes(summary: RunSummary) -> None:
 
 
 def _print_failures(summary: RunSummary) -> None:
-    for image, reason in list(summary.reasons.items())[:MOST_FAILURES]:
-        click.echo(f"{_printable(image)}: {_printable(reason)}", err=True)
-    more = len(summary.reasons) - MOST_FAILURES
-    if more > 0:
-        click.echo(f"and {more} more: see {summary.out / 'images.csv'}", err=True)
+    alike: dict[str, list[str]] = {}
+    for image, reason in summary.reasons.items():
+        alike.setdefault(reason, []).append(image)
+    groups = list(alike.items())
+    for reason, (first, *others) in groups[:MOST_FAILURES]:
+        more = f" and {len(others)} more" if others else ""
+        click.echo(f"{_printable(first)}{more}: {_printable(reason)}", err=True)
+    left = sum(len(images) for _, images in groups[MOST_FAILURES:])
+    if left:
+        click.echo(f"and {left} more: see {summary.out / 'images.csv'}", err=True)

@@ -83,6 +83,14 @@ def test_bad_picture_fails_with_a_plain_reason_and_the_rest_is_measured(folder: 
     assert "bad.png: " in result.stderr
 
 
+def test_pictures_that_fail_for_one_reason_share_one_line(folder: Path) -> None:
+    for name in ("c.png", "d.png", "e.png"):
+        (folder / name).touch()
+    (folder / "f.png").write_text("no picture")
+    lines = _measure(folder).stderr.splitlines()
+    assert [line.split(": ")[0] for line in lines] == ["c.png and 2 more", "f.png"]
+
+
 def _check_failed(out: Path, name: str, words: str) -> None:
     images = {row["image"]: row for row in _table(out, "images")}
     assert {key: row["status"] for key, row in images.items()} == {
