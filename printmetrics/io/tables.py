@@ -11,6 +11,7 @@ import re
 from contextlib import suppress
 from dataclasses import dataclass
 from datetime import datetime
+from pathlib import Path
 from typing import TYPE_CHECKING, Literal, Self
 from urllib.parse import quote
 
@@ -18,7 +19,6 @@ from printmetrics.errors import FolderError
 
 if TYPE_CHECKING:
     from collections.abc import Iterable, Mapping
-    from pathlib import Path
 
 Datatype = Literal["text", "number", "integer", "datetime"]
 Value = str | float | int | datetime | None
@@ -372,12 +372,12 @@ def describe_table(path: Path, table: Table) -> Path:
     return target
 
 
-def read_table(path: Path, table: Table | None = None) -> list[dict[str, Value]]:
+def read_table(path: str | Path, table: Table | None = None) -> list[dict[str, Value]]:
     """Read a table back.
 
     Parameters
     ----------
-    path : Path
+    path : str or Path
         A file that `TableWriter` or `write_table` wrote.
     table : Table, optional
         Which kind of table it must be; otherwise told by its header.
@@ -393,6 +393,7 @@ def read_table(path: Path, table: Table | None = None) -> list[dict[str, Value]]
     FolderError
         When the file cannot be read, holds other columns, or a cell is not of its column's type.
     """
+    path = Path(path)
     try:
         with path.open(encoding="utf-8", newline="") as file:
             reader = csv.reader(file, strict=True)

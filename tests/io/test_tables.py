@@ -82,6 +82,11 @@ def test_numbers_have_nine_digits_and_unknowns_are_empty(value: float | None, ce
     assert encode_rows(PROFILES, [{"value": value}]).decode().split(",")[6] == cell
 
 
+def test_a_table_is_read_by_its_name_as_text_too(tmp_path: Path) -> None:
+    write_table(tmp_path / "t.csv", IMAGES, [{"image": "a.png"}])
+    assert read_table(str(tmp_path / "t.csv")) == read_table(tmp_path / "t.csv")
+
+
 def test_infinite_degrees_of_freedom_come_back(tmp_path: Path) -> None:
     write_table(tmp_path / "t.csv", MEASUREMENTS, [{"dof": math.inf}])
     assert read_table(tmp_path / "t.csv")[0]["dof"] == math.inf
