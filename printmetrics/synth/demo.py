@@ -277,7 +277,7 @@ def _line_rows(shot: _Shot, truth: Truth) -> Iterator[tuple[object, ...]]:
         yield item, "ler_left_3sigma", "piece", 3 * stats.left_sd * UM_PER_PX, "um"
         yield item, "ler_right_3sigma", "piece", 3 * stats.right_sd * UM_PER_PX, "um"
         yield item, "open_count", "piece", sum(d.item == item and d.event == "open" for d in truth.defects), "1"
-        yield item, "tilt", "piece", float(truth.scene.tilt_deg), "deg"
+        yield item, "tilt", "process", float(truth.scene.tilt_deg), "deg"
     for number, (one, two) in enumerate(pairwise(items)):
         if int(two[1:]) - int(one[1:]) == 1:
             between = f"{one}..{two}"
