@@ -72,8 +72,8 @@ def draw_picture(image: NDArray[Any], inspection: Inspection, title: str) -> NDA
     grey = _display_range(cv2.resize(image, size, interpolation=how))
     text = max(0.42, 0.42 * max(size) / 1000)
     labels = _labels(inspection, zoom, text)
-    left, top = _margins(labels, text)
-    right = max(4, round(1200 * text) - left - size[0])  # a narrow strip still gets a header one can read
+    left, top, beside = _margins(labels, text, size[0])
+    right = max(beside, round(1200 * text) - left - size[0])  # a narrow strip still gets a header one can read
     canvas = cv2.copyMakeBorder(
         cv2.cvtColor(grey, cv2.COLOR_GRAY2BGR), top, 4, left, right, cv2.BORDER_CONSTANT, value=BAND
     )
@@ -341,10 +341,11 @@ def _label_box(label: _Label, text: float) -> Box:
     return round(left), round(top), round(left) + width, round(top) + height
 
 
-def _margins(labels: list[_Label], text: float) -> tuple[int, int]:
-    """Return the room that labels need left of and above the picture. [px]."""
+def _margins(labels: list[_Label], text: float, width: int) -> tuple[int, int, int]:
+    """Return the room that labels need left of, above and right of a picture of that width. [px]."""
     boxes = [_label_box(label, text) for label in labels]
-    return max([4, *(4 - box[0] for box in boxes)]), max([4, *(4 - box[1] for box in boxes)])
+    left, top = (max([4, *(4 - box[axis] for box in boxes)]) for axis in (0, 1))
+    return left, top, max([4, *(box[2] + 4 - width for box in boxes)])
 
 
 def _draw_labels(canvas: NDArray[np.uint8], labels: list[_Label], place: _Place, text: float) -> None:

@@ -92,6 +92,15 @@ def test_missing_line_is_dashed_and_named() -> None:
     assert 0.4 < lit[100:700].mean() < 0.65
 
 
+def test_label_at_the_right_border_is_whole() -> None:
+    image = np.zeros((300, 1200), np.uint8)
+    inked = []
+    for x in (600.0, 1195.0):
+        inspection = Inspection(rows=[_row("L1", "nonconforming")], shapes=[_edge("L1", x, 10)], scale=SCALE)
+        inked.append(_coloured(draw_picture(image, inspection, "x"), STYLE["nonconforming"][1]).sum())
+    assert inked[1] == pytest.approx(inked[0], rel=0.02)
+
+
 def test_verdict_colours_differ_in_lightness_too() -> None:
     colours = np.array([[STYLE[verdict][1] for verdict in ("nonconforming", "undecided", "conforming")]], np.uint8)
     light = np.sort(cv2.cvtColor(colours, cv2.COLOR_BGR2LAB)[0, :, 0].astype(int))
