@@ -16,7 +16,9 @@ import subprocess
 import sys
 import tempfile
 import time
+from functools import cache
 from pathlib import Path
+from typing import Any
 
 import cv2
 import numpy as np
@@ -36,8 +38,8 @@ ink = "bright"
 """
 
 
-def write_picture(path: Path, *, rows: int = SHAPE[0]) -> None:
-    """Render 12 rough lines, 8 bit, CNR 50."""
+def write_picture(path: Path, *, rows: int = SHAPE[0], compression: int | None = None) -> None:
+    """Render 12 rough lines, 8 bit, CNR 50; a writer that compresses harder makes a picture that decodes slower."""
     from printmetrics.synth import Line, Scene, camera, render
 
     rng = np.random.default_rng(5)
@@ -47,16 +49,24 @@ def write_picture(path: Path, *, rows: int = SHAPE[0]) -> None:
         for k in range(LINES)
     )
     image, _ = render(Scene(shape=(rows, SHAPE[1]), lines=lines, blur=1.5), rng)
-    cv2.imwrite(str(path), camera.to_codes(camera.white_noise(image, 3.0, rng), 8))
+    options = [] if compression is None else [cv2.IMWRITE_PNG_COMPRESSION, compression]
+    cv2.imwrite(str(path), camera.to_codes(camera.white_noise(image, 3.0, rng), 8), options)
+
+
+@cache
+def loaded(recipe_path: Path) -> Any:  # noqa: ANN401  (its type is imported late)
+    """Read the recipe once, as a worker does."""
+    from printmetrics.recipe import load_recipe
+
+    return load_recipe(recipe_path)
 
 
 def measure(path: Path, recipe_path: Path) -> int:
     """Read and inspect the picture; return the number of rows of the table."""
     from printmetrics.inspect import inspect_picture
     from printmetrics.io.pictures import Found, read_picture
-    from printmetrics.recipe import load_recipe
 
-    return len(inspect_picture(read_picture(Found(path, path.name)), load_recipe(recipe_path)).rows)
+    return len(inspect_picture(read_picture(Found(path, path.name)), loaded(recipe_path)).rows)
 
 
 def script(path: Path) -> int:
@@ -89,13 +99,11 @@ print((peak() - idle) / 1024)
     return float(subprocess.run([sys.executable, "-c", code], check=True, capture_output=True, text=True).stdout)
 
 
-def main() -> None:
-    """Print times and memory."""
-    runs = int(sys.argv[1]) if len(sys.argv) > 1 else 7
-    cv2.setNumThreads(1)
+def table(compression: int | None, runs: int) -> None:
+    """Print times and memory for pictures of one writer."""
     with tempfile.TemporaryDirectory() as folder:
         path, small, recipe = Path(folder, "p.png"), Path(folder, "small.png"), Path(folder, "r.toml")
-        write_picture(path)
+        write_picture(path, compression=compression)
         write_picture(small, rows=300)
         recipe.write_text(RECIPE)
         data = np.frombuffer(path.read_bytes(), np.uint8)
@@ -112,13 +120,21 @@ def main() -> None:
                 if run:  # the first one warms up
                     times[name].append(time.perf_counter() - begin)
         decode = np.median(times["decoding alone (cv2.imdecode)"])
-        print(f"{SHAPE[1]} x {SHAPE[0]} px, {LINES} lines, PNG of {data.size / 1e6:.1f} MB, {runs} runs\n")
+        writer = "as OpenCV writes it" if compression is None else f"compression {compression}"
+        print(f"\n{SHAPE[1]} x {SHAPE[0]} px, {LINES} lines, PNG of {data.size / 1e6:.1f} MB {writer}, {runs} runs\n")
         print("| job | median s | least s | over decoding | peak memory over the picture |\n|---|---|---|---|---|")
         whats = ("s.cv2.imread(str(path), -1)", "s.measure(path, recipe)", "s.script(path)")
         for (name, spent), what in zip(times.items(), whats, strict=True):
             over = peak_mb(what, small, path, recipe) / (SHAPE[0] * SHAPE[1] / 2**20)
             median = np.median(spent)
             print(f"| {name} | {median:.3f} | {min(spent):.3f} | {median / decode:.2f} | {over:.1f} |", flush=True)
+
+
+def main() -> None:
+    """Print a table for each of two PNG writers."""
+    cv2.setNumThreads(1)
+    for compression in (None, 6):
+        table(compression, int(sys.argv[1]) if len(sys.argv) > 1 else 7)
 
 
 if __name__ == "__main__":

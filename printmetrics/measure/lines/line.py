@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import ndtri
 
+from printmetrics.analysis.finding import MAX_TILT_DEG
 from printmetrics.analysis.process import palasantzas_autocovariance
 from printmetrics.analysis.roughness import Process, Record, amplitude_filter, fit_spectra, u_mean, unbiased_sd
 from printmetrics.errors import FeatureError
@@ -38,6 +39,7 @@ _DEFOCUSED = 2.0
 _UNEVEN = 0.25
 _SHARPENED = 0.004
 _SKEWED = 0.004
+_STEEPEST = math.tan(math.radians(MAX_TILT_DEG + 1.0))
 _SURE = 3.5  # standard errors by which a skew must stand out
 _SKEW_SHIFT = 35.0  # shift of an edge, in blurs, per skew: measured on gamma 1.2 and 2.2 left in
 _TYPICAL_ROWS = 128
@@ -216,7 +218,7 @@ def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFi
         * normal,
         count=int(np.isfinite(straight.width).sum()),
         level_shift=level_shift(blur, options.edge_level, bright=options.ink == "bright"),
-        flags=_flags(seen, k, sight, blur, options),
+        flags=_flags(seen, k, sight, blur, options) | (Flag.OUTSIDE_VALIDITY if abs(slope) > _STEEPEST else Flag.NONE),
     )
 
 

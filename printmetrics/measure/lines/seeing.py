@@ -199,7 +199,9 @@ def _find(part: NDArray[Any], options: LinesOptions) -> tuple[Direction, NDArray
     """Find direction and lines; where nothing is found, look again more softly."""
     low, high, _, _ = cv2.minMaxLoc(part)
     if low == high:
-        raise _nothing(part, options, f"every pixel of the region has the value {low:g}")
+        raise _nothing(
+            part, options, f"every pixel of the region has the value {low:g}; check lamp, exposure and lens cap"
+        )
     given = _given_direction(options)
     for smooth in SMOOTH_PX:
         vertical = given.vertical if given is not None else None
@@ -252,12 +254,21 @@ def _nothing(part: NDArray[Any], options: LinesOptions, why: str) -> FeatureErro
     """Say what was looked for, and that it isn't there."""
     if why != "no line was found":
         return FeatureError(f"no line can be measured: {why}", Flag.LEVELS_UNRESOLVED, count=0)
+    looks = "brighter" if options.ink == "bright" else "darker"
     msg = (
-        f"no line was found in the region of {part.shape[1]} x {part.shape[0]} px: nothing {options.ink} on its "
-        "surroundings runs through it within 30 degrees of an axis; check that the web is printed, that the region "
-        "is where the lines are, and that ink says rightly bright or dark"
+        f"no line was found in the region of {part.shape[1]} x {part.shape[0]} px: nothing {looks} than what lies "
+        f"beside it runs through it {_way(options)}; check that the web is printed, that scale and region put the "
+        "region where the lines are, and that ink and direction are set rightly"
     )
     return FeatureError(msg, Flag.COUNT_DIFFERS, count=0)
+
+
+def _way(options: LinesOptions) -> str:
+    """Say which way lines were looked for."""
+    if options.direction == "auto":
+        return f"within {MAX_TILT_DEG:g} degrees of an axis"
+    way = options.direction if isinstance(options.direction, str) else f"at {options.direction:g} degrees"
+    return f"({way}, as direction says)"
 
 
 def _names(
