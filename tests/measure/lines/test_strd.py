@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 import pytest
-from numpy.typing import NDArray
 
 from printmetrics.measure.lines.geometry import slope_of, straighten
 from printmetrics.measure.lines.line import _sd
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
 
 DATA = Path(__file__).parents[2] / "data" / "nist_strd"
 
