@@ -38,6 +38,7 @@ _SLOPE_BLUR = 0.235  # edge sigma of an aberration-free objective, in wavelength
 _DEFOCUSED = 2.0
 _UNEVEN = 0.25
 _SHARPENED = 0.004
+_FEWEST_KEPT = 8  # places with both edges that must be left when rows are left out
 _SKEWED = 0.004
 _STEEPEST = math.tan(math.radians(MAX_TILT_DEG + 1.0))
 _SURE = 3.5  # standard errors by which a skew must stand out
@@ -194,13 +195,8 @@ def _geometry(seen: Seen, k: int, sight: Sight, options: LinesOptions) -> LineFi
     rows += seen.origin[1 if seen.direction.vertical else 0]
     start = seen.origin[0 if seen.direction.vertical else 1]
     points = np.stack([np.column_stack([rows * along, (edge + start) * across]) for edge in trace.edges])
-    points[:, ~np.isfinite(trace.edges).all(axis=0)] = np.nan
-    if np.isfinite(points[0, ~seen.spoiled[k], 1]).any():
-        points[:, seen.spoiled[k]] = np.nan
-    clean, hit = points, seen.hit[k]
-    if hit.any() and np.isfinite(points[:, ~hit, 1]).sum() > np.isfinite(points[..., 1]).sum() / 4:
-        clean = points.copy()
-        clean[:, hit] = np.nan
+    points = _without(points, seen.spoiled[k], least=0.0)
+    clean = _without(points, seen.hit[k], least=0.25)
     slope = slope_of(clean)
     straight = straighten(clean, slope, along * seen.row_step)
     normal = across / math.hypot(1.0, slope)  # length across the line per pixel along the row
@@ -226,6 +222,16 @@ def _skew(trace: Trace) -> float:
     """Return the mean skew of a line's edges; 0 where it doesn't stand out of the noise."""
     skew = sum(shape.skew for shape in trace.shapes) / 2
     return skew if abs(skew) > _SURE * math.hypot(*(shape.u_skew for shape in trace.shapes)) / 2 else 0.0
+
+
+def _without(points: NDArray[np.float64], rows: NDArray[np.bool_], least: float) -> NDArray[np.float64]:
+    """Leave out rows of either edge, unless no more than a share of the line would be left."""
+    if not rows.any():
+        return points
+    rest = points.copy()
+    rest[rows] = np.nan
+    both, kept = (np.isfinite(p[..., 1]).all(axis=0).sum() for p in (points, rest))
+    return rest if kept > max(least * both, _FEWEST_KEPT) else points
 
 
 def _u_shape(shape: EdgeShape, skew: float, blur: float) -> float:

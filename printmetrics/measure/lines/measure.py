@@ -112,9 +112,9 @@ def _edge_shapes(seen: Seen, k: int) -> list[Shape]:
     """Edges as measured, and where they were left out."""
     trace = seen.traces[k]
     rows = np.arange(trace.edges.shape[1], dtype=np.float64)
-    used = np.isfinite(trace.edges).all(axis=0) & ~seen.hit[k]
     shapes = []
     for side in (0, 1):
+        used = np.isfinite(trace.edges[side]) & ~seen.hit[k, side]
         for role, where, edge in (
             ("edge", used, trace.edges[side]),
             (

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from printmetrics.measure.sight import Sight
 
 _SMALLEST_PX = 16
+_WIDE_BLURS = 8.0
 _TALL_PX, _UPRIGHT = 2000, 0.1  # from so many rows on, and up to this slope, pairs of rows are added up
 _SPOILING = ("open", "bridge", "satellite")  # a neck or a bulge is still the line's width
 _LINE_ALIKE = 0.7  # share of its way over which a line that can't be fitted must have been seen to count
@@ -53,8 +54,9 @@ class Seen:
         The lines.
     defects : list of Defect
         In the turned region's pixels.
-    hit, spoiled : ndarray of bool, shape (K, M)
-        Rows of each line in which an edge is a defect's; of these, those in which it isn't the line's edge at all.
+    hit, spoiled : ndarray of bool, shape (K, 2, M)
+        Rows in which the left or right edge of each line is a defect's; of these, those in which it isn't the line's
+        edge at all.
     count : int
         Lines found.
     expected : int or None
@@ -347,29 +349,34 @@ def _defects(
     blur = float(np.median([t.blur.mean() for t in traces]))
     margin = max(min([*space, 2 * width]), 0.0)
     found = find_defects(ink, left, right, way, slack, margin, max(6.0, 2.5 * blur * blur) / row_step)
-    hit = np.zeros((len(traces), ink.shape[0]), bool)
+    hit = np.zeros((len(traces), 2, ink.shape[0]), bool)
     spoiled = np.zeros_like(hit)
     for defect in found:
         reach = math.ceil(window_half(blur) / row_step)
         rows = slice(max(defect.rows[0] - reach, 0), defect.rows[1] + reach + 1)
-        near = _concerned(defect, left, right, blur)
-        for k in near:
-            hit[k, rows] = True
-            spoiled[k, rows] |= defect.kind in _SPOILING
+        for k, side in _concerned(defect, left, right, blur):
+            hit[k, side, rows] = True
+            spoiled[k, side, rows] |= defect.kind in _SPOILING
     return found, hit, spoiled
 
 
-def _concerned(defect: Defect, left: NDArray[np.float64], right: NDArray[np.float64], blur: float) -> list[int]:
-    """Lines whose edges a defect spoils: those it touches, and those within its blur."""
+def _concerned(
+    defect: Defect, left: NDArray[np.float64], right: NDArray[np.float64], blur: float
+) -> list[tuple[int, int]]:
+    """Edges (line, side) that a defect spoils: those it touches, and those within its blur."""
+    width = float(np.median(right - left))
+    alike = width < _WIDE_BLURS * blur  # a narrow line's edges are fitted together
     if defect.kind in ("open", "neck", "void"):
-        return [defect.line]
+        touched = [side for side, touches in ((0, defect.left), (1, defect.right)) if touches]
+        return [(defect.line, side) for side in ((0, 1) if alike or not touched else touched)]
     rows = np.clip(np.rint(defect.outline[:, 1]).astype(int), 0, left.shape[1] - 1)
     reach = 4 * blur + 2
-    near = []
+    near: list[tuple[int, int]] = []
     for k in (defect.line, defect.line + 1):
         if not 0 <= k < len(left):
             continue
         gap = defect.outline[:, 0] - right[k, rows] if k == defect.line else left[k, rows] - defect.outline[:, 0]
         if (defect.left if k == defect.line else defect.right) or float(gap.min()) < reach:
-            near.append(k)
+            side = int(k == defect.line)
+            near += [(k, 0), (k, 1)] if alike else [(k, side)]
     return near
