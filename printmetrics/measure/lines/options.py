@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Annotated, Any, Literal
 
-from pydantic import Field, FiniteFloat, field_validator, model_validator
+from pydantic import Field, FiniteFloat, ValidationInfo, field_validator, model_validator
 
 from printmetrics.analysis.finding import MAX_TILT_DEG
 from printmetrics.measure.options import FeatureOptions, Positive
@@ -53,13 +53,19 @@ class LinesOptions(FeatureOptions):
             raise ValueError(msg)
         return direction
 
-    @model_validator(mode="after")
-    def _consistent(self) -> LinesOptions:
-        if self.centres is not None:
-            if list(self.centres) != sorted(set(self.centres)):
-                msg = "centres must rise and not repeat"
-                raise ValueError(msg)
-            if self.count is not None and self.count != len(self.centres):
-                msg = f"count is {self.count} but {len(self.centres)} centres are given"
-                raise ValueError(msg)
-        return self
+    @field_validator("centres")
+    @classmethod
+    def _rising(cls, centres: tuple[float, ...] | None) -> tuple[float, ...] | None:
+        if centres is not None and list(centres) != sorted(set(centres)):
+            msg = "centres must rise and not repeat"
+            raise ValueError(msg)
+        return centres
+
+    @field_validator("count")
+    @classmethod
+    def _counts_the_centres(cls, count: int | None, info: ValidationInfo) -> int | None:
+        centres = info.data.get("centres")
+        if count is not None and centres is not None and count != len(centres):
+            msg = f"count is {count} but {len(centres)} centres are given"
+            raise ValueError(msg)
+        return count
