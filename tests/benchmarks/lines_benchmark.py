@@ -399,7 +399,7 @@ def coverage_task(seed: int) -> list[tuple[dict[str, float], str, float, float, 
 
 def coverage_table(pool: ProcessPoolExecutor, *, quick: bool) -> None:
     """Coverage of intervals, pooled and by factor."""
-    seeds = range(240 if quick else 1200)
+    seeds = range(240 if quick else 2000)
     every = [row for part in pool.map(coverage_task, seeds, chunksize=4) for row in part]
     by_name: dict[str, list[Any]] = defaultdict(list)
     for row in every:
