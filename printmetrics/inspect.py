@@ -172,11 +172,10 @@ def failed_inspection(recipe: Recipe, reason: str) -> Inspection:
     Inspection
         Status ``failed``.
     """
-    unit = "{px}" if recipe.scale.pixels else "um"
     rows = [
         _row(reading, options, recipe, Flag.NONE)
         for options in recipe.features
-        for reading in _all_withheld(options, Flag.OUTSIDE_VALIDITY, unit)
+        for reading in _all_withheld(options, Flag.OUTSIDE_VALIDITY, recipe.length_unit)
     ]
     return Inspection(rows=rows, status="failed", reason=reason)
 

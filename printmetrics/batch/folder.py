@@ -305,7 +305,7 @@ def _check_out(out: Path, recipe: Recipe) -> None:
     if not same:
         msg = (
             f"{out} holds the results of another recipe or scale ({name!r}, recipe_id {earlier['recipe_id']}; "
-            f"this one is {_title(recipe)!r}, {recipe.recipe_id}); {remedy}"
+            f"this one is {recipe.title!r}, {recipe.recipe_id}); {remedy}"
         )
         raise FolderError(msg)
 
@@ -334,7 +334,7 @@ class _Record:
         recipe = plan.recipe
         self._common = {
             "revision": 0,
-            "recipe": _title(recipe),
+            "recipe": recipe.title,
             "recipe_id": recipe.recipe_id,
             "scale_id": recipe.scale_id,
             "software": f"printmetrics {__version__}",
@@ -437,10 +437,6 @@ class _Record:
         part = plan.out / "run.json.part"
         part.write_text(json.dumps(about, indent=1) + "\n", encoding="utf-8")
         part.replace(plan.out / "run.json")
-
-
-def _title(recipe: Recipe) -> str:
-    return f"{recipe.name} {recipe.version}".strip()
 
 
 def _now() -> str:

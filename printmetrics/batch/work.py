@@ -178,6 +178,6 @@ def _taken(picture: Picture, recipe: Recipe) -> str:
 def _drawing(picture: Picture, inspection: Inspection, recipe: Recipe, name: str) -> tuple[str, bytes]:
     from printmetrics.batch.draw import draw_picture, encode  # noqa: PLC0415  (not needed where nothing is drawn)
 
-    title = f"{name} - {recipe.name} {recipe.version}".strip()
+    title = f"{name} - {recipe.title}"
     pixels = picture.pixels if picture.pixels.ndim == 2 else picture.pixels.mean(axis=2, dtype="float32")  # noqa: PLR2004
     return encode(draw_picture(pixels, inspection, title))

@@ -64,8 +64,10 @@ def measure(  # noqa: PLR0913  # numpydoc ignore=PR01
     Exit code: 0 all measured; 1 some pictures failed, see images.csv; 2 nothing measured;
     3 with --strict, a limited reading is not conforming; 130 interrupted.
     """
-    for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"):
-        os.environ.setdefault(name, "1")  # read once, when numpy is imported just below
+    from printmetrics.batch.engine import ONE_THREAD  # noqa: PLC0415  (keeps --help fast)
+
+    for name, number in ONE_THREAD.items():
+        os.environ.setdefault(name, number)  # read once, when numpy is imported just below
     from printmetrics.batch.folder import measure_folder, plan_run  # noqa: PLC0415  (keeps --help fast)
 
     plan = plan_run(folder, recipe_path, out, settings)

@@ -367,6 +367,11 @@ class Recipe(_Section):
         return tuple(notes)
 
     @property
+    def title(self) -> str:
+        """Name and version."""
+        return f"{self.name} {self.version}".strip()
+
+    @property
     def judges_items(self) -> bool:
         """Whether anything gets a verdict beside the number of items, which is limited wherever it is expected."""
         return any(

@@ -45,11 +45,11 @@ _SURE = 3.5  # standard errors by which a skew must stand out
 _SKEW_SHIFT = 35.0  # shift of an edge, in blurs, per skew: measured on gamma 1.2 and 2.2 left in
 _TYPICAL_ROWS = 128
 _NONLINEAR = 0.6  # rms move of an edge within one blur along it, over the blur
-END_SHARE = 0.4  # of a blur: light from beyond its end mixes into the mean of a piece
+_END_SHARE = 0.4  # of a blur: light from beyond its end mixes into the mean of a piece
 _MISMATCH = 0.25
 _MATTERS = 0.04
 _GAPS = 0.2
-_STANDS_OUT = 5.0
+STANDS_OUT = 5.0
 _SQRT3 = math.sqrt(3.0)
 _SERIES = ("width", "left", "right")
 
@@ -440,7 +440,7 @@ class _LineReadings:
         line = self.line
         pixels = math.sqrt(max(float(line.covariance[0, 0] + line.covariance[1, 1] - 2 * line.covariance[0, 1]), 0.0))
         blur = float(line.blur.mean())
-        ends = END_SHARE * blur * math.sqrt(2.0) * move_within(line.width, blur) / line.length if line.width else 0.0
+        ends = u_ends(line.width, blur, line.length) if line.width else 0.0
         self.u_mean_noise = math.hypot(pixels, ends)
         sampling, sampling_dof, doubt = self._sampling()
         bright = self.options.ink == "bright"
@@ -472,7 +472,7 @@ class _LineReadings:
         doubt = min(self.rough.u_noise / self.rough.sd, 1.0) if self.rough is not None and self.rough.sd > 0 else 1.0
         for name, pick, sign in (("width_min", np.nanmin, -1), ("width_max", np.nanmax, 1)):
             value, seen = float(pick(averaged)), float(pick(raw))
-            stands_out = sign * (seen - value) > _STANDS_OUT * u_raw
+            stands_out = sign * (seen - value) > STANDS_OUT * u_raw
             u = u_raw if stands_out else math.hypot(float(u_local), doubt * (value - self.mean))
             opened = name == "width_min" and self.opens > 0
             value = 0.0 if opened else seen if stands_out else value
@@ -586,6 +586,26 @@ def move_within(process: Process, distance: float) -> float:
     """
     apart = palasantzas_autocovariance(np.array([distance]), process.sigma, process.xi, process.hurst)[0]
     return math.sqrt(max(2.0 * (process.sigma**2 - float(apart)), 0.0))
+
+
+def u_ends(process: Process, blur: float, length: float) -> float:
+    """Return the standard uncertainty of a piece's mean from the light that its two ends take in from beyond.
+
+    Parameters
+    ----------
+    process : Process
+        As fitted.
+    blur : float
+        Gaussian sigma along the line. [length]
+    length : float
+        Of the piece. [length]
+
+    Returns
+    -------
+    float
+        Standard uncertainty. [length]
+    """
+    return _END_SHARE * blur * math.sqrt(2.0) * move_within(process, blur) / length
 
 
 def _sd(values: NDArray[np.float64], *, line_removed: bool) -> float:

@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 _PAIR = ("pitch", "space_mean", "space_min", "bridge_count")
 _ALL = ("line_count",)
+_SINGLE = tuple(name for name in CATALOGUE["lines"] if name not in _PAIR + _ALL)
 _FEWEST_PLACES = 8
 
 
@@ -38,12 +39,10 @@ def expected_items(options: LinesOptions) -> dict[str, tuple[str, ...]]:
     dict of str to tuple of str
         Quantities by item; all under ``all`` where neither count nor centres are given.
     """
-    known = tuple(CATALOGUE["lines"])
-    count = options.count if options.centres is None else len(options.centres)
+    count = options.expected
     if count is None:
-        return {"all": known}
-    single = tuple(name for name in known if name not in _PAIR + _ALL)
-    items = {f"L{k}": single for k in range(1, count + 1)}
+        return {"all": tuple(CATALOGUE["lines"])}
+    items = {f"L{k}": _SINGLE for k in range(1, count + 1)}
     items |= {f"L{k}..L{k + 1}": _PAIR for k in range(1, count)}
     return items | {"all": _ALL}
 
@@ -102,9 +101,14 @@ def measure_lines(sight: Sight, options: LinesOptions) -> Measured:
 def _lost(name: str, sight: Sight) -> list[Reading]:
     """Withhold every reading of a line that was found but could not be measured."""
     return [
-        Reading(item=name, quantity=q.name, value=None, unit=q.unit(sight.scale.unit), flags=Flag.LEVELS_UNRESOLVED)
-        for q in CATALOGUE["lines"].values()
-        if q.name not in _PAIR + _ALL
+        Reading(
+            item=name,
+            quantity=quantity,
+            value=None,
+            unit=CATALOGUE["lines"][quantity].unit(sight.scale.unit),
+            flags=Flag.LEVELS_UNRESOLVED,
+        )
+        for quantity in _SINGLE
     ]
 
 

@@ -9,7 +9,7 @@ import numpy as np
 
 from printmetrics.analysis.roughness import Process, amplitude_filter, unbiased_sd
 from printmetrics.flags import Flag
-from printmetrics.measure.lines.line import END_SHARE, NECK_BLURS, LineFigures, move_within, running_mean
+from printmetrics.measure.lines.line import NECK_BLURS, STANDS_OUT, LineFigures, running_mean, u_ends
 from printmetrics.measure.readings import Reading, effective_dof
 from printmetrics.quantities import CATALOGUE
 
@@ -20,8 +20,6 @@ if TYPE_CHECKING:
     from printmetrics.measure.lines.options import LinesOptions
     from printmetrics.measure.lines.seeing import Seen
     from printmetrics.measure.sight import Sight
-
-_STANDS_OUT = 5.0
 
 
 def neighbour_readings(
@@ -80,7 +78,7 @@ def neighbour_readings(
     dof = dof_pitch = math.inf
     if one.mean_u and two.mean_u and one.right and two.left:
         blur = float(one.blur[1])
-        ends = [END_SHARE * blur * math.sqrt(2.0) * move_within(p, blur) / length for p in (one.right, two.left)]
+        ends = [u_ends(p, blur, length) for p in (one.right, two.left)]
         noise, noise_pitch = math.hypot(noise, *ends), math.hypot(noise_pitch, *ends)
         wander = math.sqrt(one.centre_variance + two.centre_variance)
         (u_one, dof_one), (u_two, dof_two) = one.mean_u["right"], two.mean_u["left"]
@@ -123,7 +121,7 @@ def _least_space(one: LineFigures, two: LineFigures, options: LinesOptions, mean
     (freed, u_freed), (taken, u_taken) = (_local(*side, neck) for side in sides)
     value = float(np.nanmin(freed - taken))
     u_raw = math.hypot(two.left.noise, one.right.noise) / math.sqrt(count)
-    if value - raw > _STANDS_OUT * u_raw:
+    if value - raw > STANDS_OUT * u_raw:
         return raw, u_raw
     # How deep it lies is known no better than the scatter it belongs to.
     rough = [unbiased_sd(edge, process) for edge, process, _ in sides]

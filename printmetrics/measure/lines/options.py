@@ -69,3 +69,8 @@ class LinesOptions(FeatureOptions):
             msg = f"count is {count} but {len(centres)} centres are given"
             raise ValueError(msg)
         return count
+
+    @property
+    def expected(self) -> int | None:
+        """Number of lines promised, if any."""
+        return self.count if self.centres is None else len(self.centres)

@@ -42,10 +42,10 @@ class Seen:
         Axis and slope.
     origin : tuple of int
         Column and row of the region in the picture. [px]
-    image : ndarray, shape (M, N)
-        The region, turned so that the lines run along its columns. [counts]
     row_step : int
-        Rows of the picture in one row of `image`: 2 where pairs of rows were added up.
+        Rows of the picture in one row of the turned region: 2 where pairs of rows were added up.
+    saturated : ndarray of bool, shape (M, N), or None
+        Saturated pixels of the region, turned so that the lines run along its columns.
     names : list of str
         Name of each line traced, in order of place.
     lost : list of str
@@ -65,7 +65,6 @@ class Seen:
 
     direction: Direction
     origin: tuple[int, int]
-    image: NDArray[Any]
     row_step: int
     saturated: NDArray[np.bool_] | None
     names: list[str]
@@ -74,17 +73,16 @@ class Seen:
     defects: list[Defect]
     hit: NDArray[np.bool_]
     spoiled: NDArray[np.bool_]
-    ink: NDArray[Any]
     count: int
     expected: int | None
 
     def to_picture(self, along: NDArray[np.float64], across: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Turn places in `image` into places in the picture.
+        """Turn places in the turned region into places in the picture.
 
         Parameters
         ----------
         along, across : ndarray of float, shape (n,)
-            Rows and columns of `image`.
+            Rows and columns of the turned region.
 
         Returns
         -------
@@ -96,12 +94,12 @@ class Seen:
         return np.column_stack([x + self.origin[0], y + self.origin[1]])
 
     def to_rows(self, along: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Turn rows of `image` into rows of the region.
+        """Turn rows of the turned region into rows of the region.
 
         Parameters
         ----------
         along : ndarray of float, shape (n,)
-            Rows of `image`.
+            Rows of the turned region.
 
         Returns
         -------
@@ -146,7 +144,6 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
     real = [trace is not None or line.covered > _LINE_ALIKE for line, trace in zip(found, tried, strict=True)]
     found = [line for line, keep in zip(found, real, strict=True) if keep]
     tried = [trace for trace, keep in zip(tried, real, strict=True) if keep]
-    expected = options.count if options.centres is None else len(options.centres)
     middle = len(image) // 2
     places = [float(np.interp(middle, line.rows, (line.left + line.right) / 2)) for line in found]
     names = _names(places, direction, origin, sight, options)
@@ -163,7 +160,6 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
     return Seen(
         direction=direction,
         origin=origin,
-        image=image,
         row_step=row_step,
         saturated=saturated,
         names=names,
@@ -171,10 +167,9 @@ def see_lines(sight: Sight, options: LinesOptions) -> Seen:
         defects=defects,
         hit=hit,
         spoiled=spoiled,
-        ink=ink,
         lost=lost,
         count=len(found),
-        expected=expected,
+        expected=options.expected,
     )
 
 
