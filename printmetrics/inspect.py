@@ -2,19 +2,15 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass, field, replace
 from functools import lru_cache
 from typing import TYPE_CHECKING, Any
-
-import numpy as np
 
 from printmetrics.analysis.light import linear_light
 from printmetrics.errors import FeatureError, PictureError, RecipeError
 from printmetrics.flags import Flag
 from printmetrics.io.pictures import Found, read_picture
 from printmetrics.measure.kinds import KINDS
-from printmetrics.measure.lines import LinesOptions
 from printmetrics.measure.readings import Event, Measured, Profile, Reading, Shape, expanded
 from printmetrics.measure.sight import Sight
 from printmetrics.quantities import CATALOGUE
@@ -192,7 +188,7 @@ def _measured(sight: Sight, options: FeatureOptions, failures: dict[str, str]) -
         none_found = error.flags == Flag.COUNT_DIFFERS
         return Measured(
             readings=_all_withheld(options, error.flags, unit, error.count),
-            shapes=_missing(options, set(), [], sight) if none_found else [],
+            shapes=kind.missing(options, set(), [], sight) if none_found else [],
         )
     given = {(reading.item, reading.quantity): None for reading in measured.readings}
     items = {item for item, _ in given}
@@ -201,7 +197,7 @@ def _measured(sight: Sight, options: FeatureOptions, failures: dict[str, str]) -
         for item, quantity in _promised(options, list(given))
         if (item, quantity) not in given
     ]
-    shapes = [*measured.shapes, *_missing(options, items, measured.shapes, sight)]
+    shapes = [*measured.shapes, *kind.missing(options, items, measured.shapes, sight)]
     return replace(measured, readings=[*measured.readings, *missing], shapes=shapes)
 
 
@@ -274,34 +270,6 @@ def _region_shape(options: FeatureOptions, scale: Scale) -> list[Shape]:
     x, y, w, h = options.region
     corners = [(x, y), (x + w, y), (x + w, y + h), (x, y + h), (x, y)]
     return [Shape(item=ALL, role="region", points_px=scale.to_px(corners))]
-
-
-def _missing(options: FeatureOptions, found: set[str], shapes: list[Shape], sight: Sight) -> list[Shape]:
-    """Return where the lines should run that were not found, as far as the recipe tells."""
-    if not isinstance(options, LinesOptions) or options.centres is None:
-        return []
-    edges = [shape.points_px[np.isfinite(shape.points_px).all(axis=1)] for shape in shapes if shape.role == "edge"]
-    course = sum((edge[-1] - edge[0] for edge in edges), np.zeros(2))
-    if not course.any():
-        if options.direction == "auto":
-            return []
-        named = {"horizontal": 0.0, "vertical": 90.0}
-        angle = math.radians(
-            named.get(options.direction, 0.0) if isinstance(options.direction, str) else options.direction
-        )
-        course = sight.scale.to_px((math.cos(angle), math.sin(angle)))
-    along = int(abs(course[1]) > abs(course[0]))
-    height, width = sight.image.shape
-    x, y, w, h = options.region or (0.0, 0.0, *sight.scale.to_length([width - 1, height - 1]))
-    corners = sight.scale.to_px([(x, y), (x + w, y + h)])
-    places = sight.scale.to_px(np.repeat(np.array(options.centres)[:, None], 2, axis=1))
-    lines = []
-    for k, place in enumerate(places, 1):
-        if f"L{k}" not in found:
-            place[along] = corners[:, along].mean()
-            steps = (corners[:, along] - place[along]) / course[along]
-            lines.append(Shape(item=f"L{k}", role="missing", points_px=place + steps[:, None] * course))
-    return lines
 
 
 def _row(reading: Reading, options: FeatureOptions, recipe: Recipe, doubt: Flag) -> Row:

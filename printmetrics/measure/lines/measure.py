@@ -98,6 +98,51 @@ def measure_lines(sight: Sight, options: LinesOptions) -> Measured:
     return result
 
 
+def missing_lines(options: LinesOptions, found: set[str], shapes: list[Shape], sight: Sight) -> list[Shape]:
+    """Return where the lines should run that were not found, as far as the recipe tells.
+
+    Parameters
+    ----------
+    options : LinesOptions
+        What the recipe says.
+    found : set of str
+        Names of the lines that were found.
+    shapes : list of Shape
+        What is drawn of those; their course is taken where no direction is given.
+    sight : Sight
+        For the scale and the picture's size.
+
+    Returns
+    -------
+    list of Shape
+        One for each line missing; none where the recipe gives no centres.
+    """
+    if options.centres is None:
+        return []
+    edges = [shape.points_px[np.isfinite(shape.points_px).all(axis=1)] for shape in shapes if shape.role == "edge"]
+    course = sum((edge[-1] - edge[0] for edge in edges), np.zeros(2))
+    if not course.any():
+        if options.direction == "auto":
+            return []
+        named = {"horizontal": 0.0, "vertical": 90.0}
+        angle = math.radians(
+            named.get(options.direction, 0.0) if isinstance(options.direction, str) else options.direction
+        )
+        course = sight.scale.to_px((math.cos(angle), math.sin(angle)))
+    along = int(abs(course[1]) > abs(course[0]))
+    height, width = sight.image.shape
+    x, y, w, h = options.region or (0.0, 0.0, *sight.scale.to_length([width - 1, height - 1]))
+    corners = sight.scale.to_px([(x, y), (x + w, y + h)])
+    places = sight.scale.to_px(np.repeat(np.array(options.centres)[:, None], 2, axis=1))
+    lines = []
+    for k, place in enumerate(places, 1):
+        if f"L{k}" not in found:
+            place[along] = corners[:, along].mean()
+            steps = (corners[:, along] - place[along]) / course[along]
+            lines.append(Shape(item=f"L{k}", role="missing", points_px=place + steps[:, None] * course))
+    return lines
+
+
 def _lost(name: str, sight: Sight) -> list[Reading]:
     """Withhold every reading of a line that was found but could not be measured."""
     return [
